@@ -1,0 +1,168 @@
+"""Which inputs the artefacts are tried on, and the exact outputs expected of every one of them.
+
+The rows are invented, never rows of the data: random ones, corners of the ranges, rows next to and exactly on the
+threshold, and every kind of fault. They follow from the sealed model alone (the generator is seeded with its id), so
+that a check can make them again.
+"""
+
+from __future__ import annotations
+
+import binascii
+import itertools
+import math
+import random
+from collections.abc import Iterator, Sequence
+
+import numpy as np
+
+from export.targets import Output, SelfTest, Vector
+from runtime_min import arithmetic, score
+from runtime_min.model import SealedModel
+from runtime_min.validity import device_numbers
+
+RANDOM_ROWS = 300
+CORNER_ROWS = 64
+THRESHOLD_ROWS = 40
+ON_THRESHOLD_TRIES = 400
+SELF_TEST_ROWS = 12
+
+Row = tuple[float, ...]
+
+
+def expected(sealed: SealedModel, inputs: Sequence[float]) -> Output:
+    """What the reference scorer says of one row, as raw bits."""
+    fault, values = score.prepared(sealed, inputs)
+    kind = sealed.arithmetic
+    if fault:
+        nan = arithmetic.raw_bits(math.nan, kind)
+        blank = (nan,) * len(sealed.intercepts)
+        return Output(fault, blank, blank, score.FAULT)
+    log_odds = score.scores(sealed, values)
+    probability = [arithmetic.logistic(z, sealed.exponential, arithmetic.ROUND[kind]) for z in log_odds]
+    return Output(
+        0,
+        tuple(arithmetic.raw_bits(z, kind) for z in log_odds),
+        tuple(arithmetic.raw_bits(p, kind) for p in probability),
+        score.decide(sealed, inputs),
+    )
+
+
+def table_crc(sealed: SealedModel) -> int:
+    """CRC-32 (ISO-HDLC) over the bits of every device number, least significant byte first."""
+    width = 4 if sealed.arithmetic == "binary32" else 8
+    data = b"".join(
+        arithmetic.raw_bits(number, sealed.arithmetic).to_bytes(width, "little") for _, number in device_numbers(sealed)
+    )
+    return binascii.crc32(data)
+
+
+def make_vectors(sealed: SealedModel) -> tuple[Vector, ...]:
+    """All vectors of a release, in a fixed order."""
+    rng = random.Random(sealed.model_id)
+    kinds: list[tuple[str, Iterator[Row]]] = [
+        ("random", (random_row(sealed, rng) for _ in range(RANDOM_ROWS))),
+        ("corner", _corners(sealed, rng)),
+        ("threshold", _next_to_threshold(sealed, rng)),
+        ("policy", _policy_rows(sealed, rng)),
+    ]
+    return tuple(Vector(kind, row, expected(sealed, row)) for kind, rows in kinds for row in rows)
+
+
+def self_test_of(sealed: SealedModel, vectors: Sequence[Vector]) -> SelfTest:
+    """A few vectors of each kind, and the tables' CRC."""
+    chosen: list[Vector] = []
+    by_kind = [[v for v in vectors if v.kind == kind] for kind in ("random", "corner", "threshold", "policy")]
+    for rank in range(SELF_TEST_ROWS):
+        for group in by_kind:
+            if rank < len(group) and len(chosen) < SELF_TEST_ROWS:
+                chosen.append(group[-1 - rank])
+    return SelfTest(tuple(chosen), table_crc(sealed))
+
+
+def random_row(sealed: SealedModel, rng: random.Random) -> Row:
+    """One row, uniform over the ranges, of numbers of the arithmetic."""
+    rounded = arithmetic.ROUND[sealed.arithmetic]
+    return tuple(
+        float(rng.randrange(len(entry.levels)))
+        if entry.levels
+        else min(max(rounded(entry.low + (entry.high - entry.low) * rng.random()), entry.low), entry.high)
+        for entry in sealed.inputs
+    )
+
+
+def next_to(value: float, towards: float, kind: str) -> float:
+    """The neighbour of `value` in the arithmetic, towards `towards`."""
+    if kind == "binary32":
+        return float(np.nextafter(np.float32(value), np.float32(towards)))
+    return math.nextafter(value, towards)
+
+
+def _corners(sealed: SealedModel, rng: random.Random) -> Iterator[Row]:
+    limits = [(entry.low, entry.high) for entry in sealed.inputs]
+    if 2 ** len(limits) <= CORNER_ROWS:
+        yield from itertools.product(*limits)
+        return
+    yield tuple(low for low, _ in limits)
+    yield tuple(high for _, high in limits)
+    for _ in range(CORNER_ROWS - 2):
+        yield tuple(rng.choice(pair) for pair in limits)
+
+
+def _next_to_threshold(sealed: SealedModel, rng: random.Random) -> Iterator[Row]:
+    """Rows on either side of a threshold, one step of one input apart, and rows whose log-odds are the threshold."""
+    found: list[Row] = []
+    exact: list[Row] = []
+    numeric = [position for position, entry in enumerate(sealed.inputs) if not entry.levels]
+    limits = {sealed.decision.low, sealed.decision.high}
+    for attempt in range(ON_THRESHOLD_TRIES):
+        if len(found) >= THRESHOLD_ROWS and len(exact) >= THRESHOLD_ROWS // 4 or not numeric:
+            break
+        threshold = rng.choice(sorted(limits))
+        pair = _bracket(sealed, list(random_row(sealed, rng)), rng.choice(numeric), threshold)
+        if pair is None:
+            continue
+        if len(found) < THRESHOLD_ROWS:
+            found += pair
+        exact += [row for row in pair if score.log_odds(sealed, row) == threshold]
+    yield from found
+    yield from exact[: THRESHOLD_ROWS // 4]
+
+
+def _bracket(sealed: SealedModel, row: list[float], position: int, threshold: float) -> tuple[Row, Row] | None:
+    """Bisect one input until two neighbouring numbers stand on either side of the threshold."""
+    entry = sealed.inputs[position]
+    rounded = arithmetic.ROUND[sealed.arithmetic]
+
+    def at(value: float) -> Row:
+        return (*row[:position], value, *row[position + 1 :])
+
+    below, above = entry.low, entry.high
+    if score.log_odds(sealed, at(below)) > score.log_odds(sealed, at(above)):
+        below, above = above, below
+    if not score.log_odds(sealed, at(below)) < threshold <= score.log_odds(sealed, at(above)):
+        return None
+    while next_to(below, above, sealed.arithmetic) != above:
+        middle = rounded(below + (above - below) / 2)
+        if middle in (below, above):
+            middle = next_to(below, above, sealed.arithmetic)
+        if score.log_odds(sealed, at(middle)) < threshold:
+            below = middle
+        else:
+            above = middle
+    return at(below), at(above)
+
+
+def _policy_rows(sealed: SealedModel, rng: random.Random) -> Iterator[Row]:
+    """For every input: missing, infinite, on and one step beyond each limit, halves of a level; then several at once."""
+    kind = sealed.arithmetic
+    for position, entry in enumerate(sealed.inputs):
+        odd = [math.nan, math.inf, -math.inf, entry.low, entry.high, -0.0]
+        odd += [next_to(entry.low, -math.inf, kind), next_to(entry.high, math.inf, kind)]
+        if entry.levels:
+            odd += [0.5, len(entry.levels) - 1.5, float(len(entry.levels)), -1.0]
+        for value in odd:
+            row = random_row(sealed, rng)
+            yield (*row[:position], value, *row[position + 1 :])
+    for _ in range(8):
+        yield tuple(rng.choice((value, math.nan, math.inf)) for value in random_row(sealed, rng))
+    yield (math.nan,) * len(sealed.inputs)

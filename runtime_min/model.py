@@ -1,0 +1,287 @@
+"""The frozen data classes that stand between the rooms, and nothing that computes.
+
+Three stages, each plain data that goes to JSON and back without loss (`codec`):
+
+* `TrainedModel`: what the rows said. Its log-odds are the *exact* real function of its numbers:
+  for class k + 1 against class 0, ``intercept_k + sum_j weight_kj * (v_j - centre_j) / scale_j``.
+* `Request`: what was asked of sealing, exactly as the plan put it (numbers as decimal or rational texts).
+* `SealedModel`: every number that a device carries, each rounded once. Only these are hashed into the model id.
+
+Units: an input's value is in the unit that the plan names; log-odds are natural logarithms of odds.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+ARITHMETICS = ("binary64", "binary32")
+"""How a target computes. Integers (int16, int32) join here when their scorer exists."""
+
+FAULT = -2
+NO_CALL = -1
+
+
+# --- trained ---------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class TrainedInput:
+    """One measured quantity as training saw it. `levels` is empty for a number.
+
+    `typical` is the fitted rows' mean (levels: the commonest level's index); None where the rows gave none.
+    """
+
+    name: str
+    unit: str
+    levels: tuple[str, ...]
+    typical: float | None
+
+
+@dataclass(frozen=True)
+class TrainedTerm:
+    """One column of the design matrix: the input itself ("value") or the indicator of one level ("level").
+
+    The column is (v - centre) / scale; an indicator has centre 0 and scale 1.
+    """
+
+    name: str
+    form: str
+    of: tuple[int, ...]
+    level: int | None
+    centre: float
+    scale: float
+
+
+@dataclass(frozen=True)
+class Score:
+    """The log-odds of one class against class 0: an intercept and one weight a term, on standardised columns."""
+
+    intercept: float
+    weights: tuple[float, ...]
+
+
+@dataclass(frozen=True)
+class TrainedPrior:
+    """Gaussian prior of each standardised weight, in the order of the terms. An sd of None is flat."""
+
+    means: tuple[float, ...]
+    sds: tuple[float | None, ...]
+    intercept_sd: float | None
+
+
+@dataclass(frozen=True)
+class Certificate:
+    """Proof of optimality, at the weights as stored.
+
+    `gradient`: the largest component relative to the sum of the sizes of the terms that make it;
+    `newton_decrement`: sqrt(g' H^-1 g); `distance`: bound on the distance to the optimum, in posterior sd.
+    """
+
+    gradient: float
+    newton_decrement: float
+    distance: float
+
+
+@dataclass(frozen=True)
+class FittedRows:
+    """How many rows there were, how many were dropped for a missing value, fitted, held out; SHA-256 of their file."""
+
+    total: int
+    dropped: int
+    fitted: int
+    held_out: int
+    sha256: str | None
+
+
+@dataclass(frozen=True)
+class HeldOut:
+    """Results on the rows that were never fitted; the base values are those of the fitted rows' event share alone."""
+
+    rows: int
+    events: int
+    log_loss: float
+    brier: float
+    auc: float | None
+    base_rate: float
+    base_log_loss: float
+    base_brier: float
+
+
+@dataclass(frozen=True)
+class Witness:
+    """What training itself says of one row: log-odds in binary64 on standardised columns, each with its own bound."""
+
+    inputs: tuple[float, ...]
+    log_odds: tuple[float, ...]
+    bounds: tuple[float, ...]
+
+
+@dataclass(frozen=True)
+class TrainedModel:
+    """What the rows said. `covariance` is the posterior's, intercept first, (1 + terms) squared (two classes)."""
+
+    inputs: tuple[TrainedInput, ...]
+    classes: tuple[str, ...]
+    class_weights: tuple[float, ...]
+    terms: tuple[TrainedTerm, ...]
+    scores: tuple[Score, ...]
+    prior: TrainedPrior
+    covariance: tuple[tuple[float, ...], ...]
+    certificate: Certificate
+    rows: FittedRows
+    held_out: HeldOut | None
+    witness: tuple[Witness, ...]
+
+    @property
+    def intercept(self) -> float:
+        """The intercept on standardised columns (two classes)."""
+        return self._only_score().intercept
+
+    @property
+    def weights(self) -> tuple[float, ...]:
+        """The weights on standardised columns, one a term (two classes)."""
+        return self._only_score().weights
+
+    def _only_score(self) -> Score:
+        if len(self.scores) != 1:
+            raise AttributeError("more than two classes: read scores, one a class after the first")
+        return self.scores[0]
+
+    def folded(self) -> Score:
+        """Intercept and weights per unit of each term (two classes): the exact fold, each rounded to binary64."""
+        from runtime_min.sealing import fold
+
+        exact = fold(self)[0]
+        return Score(float(exact.intercept), tuple(float(weight) for weight in exact.weights))
+
+
+# --- asked of sealing ------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class InputRequest:
+    """What the device delivers. `low` and `high` are exact texts ("-95", "1/10"); None for an input with levels."""
+
+    name: str
+    column: str
+    unit: str
+    levels: tuple[str, ...]
+    low: str | None
+    high: str | None
+    outside: str
+    missing: str
+    assumed: bool
+
+
+@dataclass(frozen=True)
+class DecisionRequest:
+    """Costs as exact texts, or the threshold in log-odds itself; with a threshold the costs are None."""
+
+    cost_false_alarm: str | None
+    cost_miss: str | None
+    threshold: str | None
+
+
+@dataclass(frozen=True)
+class Request:
+    """All that sealing needs beside the trained model. `tolerance` is the largest allowed log-odds error, or None."""
+
+    model: str
+    arithmetic: str
+    inputs: tuple[InputRequest, ...]
+    decision: DecisionRequest
+    tolerance: str | None
+
+
+# --- sealed ----------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Input:
+    """One input as the device checks it. With `levels` it is 0, 1, … K - 1, and low and high are 0 and K - 1.
+
+    `typical` stands in for a missing value where `missing` is "typical"; otherwise it is None.
+    """
+
+    name: str
+    unit: str
+    levels: tuple[str, ...]
+    low: float
+    high: float
+    outside: str
+    missing: str
+    typical: float | None
+
+
+@dataclass(frozen=True)
+class Term:
+    """One step of the sum. `form` "value": one weight, on the input less its datum; "level": one weight a level.
+
+    `of` holds the positions of its inputs; `weights[k]` belongs to the log-odds of class k + 1 against class 0.
+    """
+
+    form: str
+    of: tuple[int, ...]
+    datum: float | None
+    weights: tuple[tuple[float, ...], ...]
+
+
+@dataclass(frozen=True)
+class Thresholds:
+    """Two classes: z >= high is class 1, z < low is class 0, between them is no call."""
+
+    low: float
+    high: float
+
+
+@dataclass(frozen=True)
+class Exponential:
+    """The constants of exp(t), t <= 0; see `arithmetic.exponential`."""
+
+    inv_ln2: float
+    ln2_high: float
+    ln2_low: float
+    floor: float
+    coefficients: tuple[float, ...]
+
+
+@dataclass(frozen=True)
+class About:
+    """What goes with a sealed model but is not hashed into its id."""
+
+    purpose: str
+    request: Request
+    rows_sha256: str | None
+    plan_sha256: str | None
+    tool: str
+
+
+@dataclass(frozen=True)
+class SealedModel:
+    """Every number that a device carries. `intercepts[k]` belongs to the log-odds of class k + 1 against class 0."""
+
+    name: str
+    arithmetic: str
+    classes: tuple[str, ...]
+    inputs: tuple[Input, ...]
+    terms: tuple[Term, ...]
+    intercepts: tuple[float, ...]
+    decision: Thresholds
+    exponential: Exponential
+    about: About
+
+    @cached_property
+    def model_id(self) -> str:
+        """First 16 hex digits of SHA-256 over the canonical JSON of all fields but `about`."""
+        from runtime_min.codec import model_id
+
+        return model_id(self)
+
+
+def in_range(sealed: SealedModel, inputs: tuple[float, ...]) -> bool:
+    """True where every input lies within the device limits (levels: is one of them)."""
+    return all(
+        entry.low <= value <= entry.high and (not entry.levels or value == int(value))
+        for entry, value in zip(sealed.inputs, inputs, strict=True)
+    )
