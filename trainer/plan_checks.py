@@ -1,0 +1,213 @@
+"""One table of a plan, read key by key: every mistake becomes one sentence, and reading goes on.
+
+A method that finds a mistake reports it and returns a stand-in of the right type. Nothing sees the stand-ins, because a
+plan with a problem is never returned.
+"""
+
+from __future__ import annotations
+
+import datetime
+import difflib
+import json
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from decimal import Decimal
+from fractions import Fraction
+
+import numpy as np
+
+from runtime_min.errors import Problem
+
+# Fraction(Decimal("1e30000000")) never returns; no measured quantity needs more than this.
+LARGEST_EXPONENT = 400
+MOST_DIGITS = 400
+_LONGEST_SHOWN = 60
+
+
+class Unreadable(str):
+    """A number in the file that even Decimal cannot hold, as it was written."""
+
+    __slots__ = ()
+
+
+class Section:
+    """A table and where it stands; `problems` is shared by all sections of one plan."""
+
+    def __init__(self, where: str, table: Mapping[str, object], problems: list[Problem]) -> None:
+        self.where = where
+        self.table = table
+        self.problems = problems
+
+    def report(self, key: str, found: str, todo: str) -> None:
+        self.problems.append(Problem(f"{self.where}: {key}", found, todo))
+
+    def refuse_other_keys(self, known: Iterable[str], later: Mapping[str, tuple[str, str]]) -> None:
+        """Report each key that is neither known nor ours, with the nearest one, and each that is `later`'s.
+
+        `later`: key -> (what is not there yet, what to do instead).
+        """
+        ours = [*known, *later]
+        for key in self.table:
+            if key in later:
+                what, todo = later[key]
+                self.report(key, f"{what} not there yet", todo)
+            elif key not in ours:
+                near = difflib.get_close_matches(key, ours, n=1)
+                todo = f"write {near[0]} if that is meant" if near else f"the keys here are {', '.join(ours)}"
+                self.report(shortened(key), "found an unknown key", todo)
+
+    def section(self, key: str) -> Section:
+        """The table under `key`; an empty one if there is none."""
+        value = self.table.get(key, {})
+        if not isinstance(value, dict):
+            self.report(key, f"found {shown(value)}, not a table", f"write [{key}] on a line of its own")
+            value = {}
+        return Section(f"{self.where}: [{key}]", value, self.problems)
+
+    def text(self, key: str, default: str | None, todo: str = "write a text in quotes") -> str:
+        """A text of at least one character, all of them printable. `default` None: the key is needed."""
+        value = self.table.get(key, default)
+        if value is None:
+            self.report(key, "found nothing", todo)
+        elif not isinstance(value, str):
+            self.report(key, f"found {shown(value)}, not a text", todo)
+        elif key in self.table and not value.strip():
+            self.report(key, "found an empty text", todo)
+        elif not all(character.isprintable() or character == "\n" for character in value):
+            self.report(key, f"found a control character in {shown(value)}", "remove it")
+        else:
+            return value
+        return ""
+
+    def texts(self, key: str, todo: str) -> tuple[str, ...]:
+        """A list of different texts, none of them empty; () if it is anything else."""
+        value = self.table[key]
+        if not isinstance(value, list):
+            self.report(key, f"found {shown(value)}, not a list", todo)
+            return ()
+        before = len(self.problems)
+        for position, text in enumerate(value):
+            if not isinstance(text, str):
+                self.report(key, f"found {shown(text)}, not a text", "write it in quotes, as it stands in the file")
+            elif not text.strip():
+                self.report(key, "found an empty text", "name it: an empty field is a missing value")
+            elif not text.isprintable():
+                self.report(key, f"found a control character in {shown(text)}", "remove it")
+            elif text in value[:position]:
+                self.report(key, f"found {shown(text)} twice", "name it once")
+        return tuple(value) if len(self.problems) == before else ()
+
+    def choice(self, key: str, default: str, choices: Sequence[str], later: Sequence[str] = ()) -> str:
+        value = self.table.get(key, default)
+        if isinstance(value, str) and value in choices:
+            return value
+        todo = f"write {either(choices)}"
+        if isinstance(value, str) and value in later:
+            self.report(key, f"found {shown(value)}, which is not there yet", todo)
+        else:
+            self.report(key, f"found {shown(value)}", todo)
+        return default
+
+    def number(self, key: str, default: Fraction, todo: str = "write a number") -> Fraction:
+        """The number under `key`, exactly as its decimals say."""
+        value = exact(self.table[key]) if key in self.table else default
+        if isinstance(value, Fraction):
+            return value
+        self.report(key, value, todo)
+        return default
+
+    def positive(self, key: str, default: Fraction) -> Fraction:
+        todo = "write a number above 0"
+        value = self.number(key, default, todo)
+        if not value > 0:
+            self.report(key, f"found {decimal_text(value)}", todo)
+        return value
+
+
+def exact(value: object) -> Fraction | str:
+    """A TOML number as a Fraction, or what was found instead ("found …"). Answers at once, whatever the number."""
+    if isinstance(value, Unreadable):
+        return _too_large(value)
+    if isinstance(value, Decimal):
+        if not value.is_finite():
+            return f"found {shown(value)}, which is not finite"
+        if abs(value.adjusted()) > LARGEST_EXPONENT:
+            return _too_large(str(value))
+        digits = len(value.as_tuple().digits)
+        return Fraction(value) if digits <= MOST_DIGITS else _too_long(digits)
+    if isinstance(value, int) and not isinstance(value, bool):
+        digits = int(value.bit_length() * math.log10(2)) + 1
+        return Fraction(value) if digits <= MOST_DIGITS else _too_long(digits)
+    return f"found {shown(value)}, not a number"
+
+
+def range_problem(low: Fraction, high: Fraction, arithmetic: str) -> tuple[str, str] | None:
+    """(found, what to do) where an input's range has no width in the device's arithmetic or leaves it; else None."""
+    if low > high:
+        return f"found {decimal_text(low)} before {decimal_text(high)}", "put the lower limit first"
+    if low == high:
+        return f"found {decimal_text(low)} twice, a range without width", "write two different limits"
+    rounded = [device_number(limit, arithmetic) for limit in (low, high)]
+    for limit, number in zip((low, high), rounded, strict=True):
+        if not math.isfinite(number):
+            return f"found {decimal_text(limit)}, too large for {arithmetic}", "write a limit that the device can hold"
+    if not rounded[0] < rounded[1]:
+        return (
+            f"found {decimal_text(low)} and {decimal_text(high)}, one and the same number in {arithmetic}",
+            "write limits farther apart",
+        )
+    return None
+
+
+def device_number(value: Fraction, arithmetic: str) -> float:
+    """`value` rounded to `arithmetic`, "binary32" or "binary64"; infinite where it is too large."""
+    try:
+        number = float(value)
+    except OverflowError:
+        return math.inf if value > 0 else -math.inf
+    with np.errstate(over="ignore", under="ignore"):
+        return float(np.float32(number)) if arithmetic == "binary32" else number
+
+
+def decimal_text(value: Fraction) -> str:
+    """`value` as a reader wants it: 250, -0.05, 1e+30."""
+    try:
+        text = repr(float(value))
+    except OverflowError:
+        return f"{Decimal(value.numerator) / Decimal(value.denominator):.6g}"
+    return text.removesuffix(".0")
+
+
+def either(choices: Sequence[str]) -> str:
+    """"a", "b" or "c"."""
+    quoted = [f'"{choice}"' for choice in choices]
+    return " or ".join([", ".join(quoted[:-1]), quoted[-1]]) if len(quoted) > 1 else quoted[0]
+
+
+def shown(value: object) -> str:
+    """What a file holds, in one short line."""
+    if isinstance(value, str) and not isinstance(value, Unreadable):
+        return json.dumps(shortened(value), ensure_ascii=False)
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, int):
+        return str(value) if value.bit_length() < 128 else "a very long integer"
+    if isinstance(value, Decimal):
+        return {"Infinity": "inf", "-Infinity": "-inf", "NaN": "nan"}.get(str(value), shortened(str(value)))
+    if isinstance(value, datetime.date | datetime.time):
+        return f"the {'time' if isinstance(value, datetime.time) else 'date'} {value}"
+    if isinstance(value, list):
+        return f"a list of {len(value)}"
+    return "a table" if isinstance(value, dict) else shortened(str(value))
+
+
+def shortened(text: str) -> str:
+    return text if len(text) <= _LONGEST_SHOWN else text[: _LONGEST_SHOWN - 1] + "…"
+
+
+def _too_large(text: str) -> str:
+    return f"found {shortened(text)}, outside the exponents -{LARGEST_EXPONENT} to {LARGEST_EXPONENT} that a plan may use"
+
+
+def _too_long(digits: int) -> str:
+    return f"found a number of {digits} digits, more than {MOST_DIGITS}"
