@@ -12,27 +12,49 @@ import unicodedata
 # C99 5.2.4.1: a compiler need only tell apart the first 63 characters of an internal identifier.
 LONGEST_NAME = 63
 
-NAME_RULE = (
-    f"write lower-case letters, digits and single underscores, at most {LONGEST_NAME}, a letter first and no underscore last"
-)
+NAME_RULE = f"write lower-case letters, digits and single underscores, from a letter on, at most {LONGEST_NAME}"
 
 # Python 3.13 reference, 2.3.1; the names that start with a capital cannot be plan names and are left out.
-_PYTHON_KEYWORDS = ["and", "as", "assert", "async", "await", "break", "class", "continue", "def", "del", "elif", "else", "except", "finally", "for", "from", "global", "if", "import", "in", "is", "lambda", "nonlocal", "not", "or", "pass", "raise", "return", "try", "while", "with", "yield"]
+_PYTHON_KEYWORDS = """
+    and as assert async await break class continue def del elif else except finally for from global if import in is
+    lambda nonlocal not or pass raise return try while with yield
+"""
 
 # ISO C23, 6.4.1, which contains those of C99; names with a leading underscore cannot be plan names.
-_C_KEYWORDS = ["alignas", "alignof", "auto", "bool", "break", "case", "char", "const", "constexpr", "continue", "default", "do", "double", "else", "enum", "extern", "false", "float", "for", "goto", "if", "inline", "int", "long", "nullptr", "register", "restrict", "return", "short", "signed", "sizeof", "static", "static_assert", "struct", "switch", "thread_local", "true", "typedef", "typeof", "typeof_unqual", "union", "unsigned", "void", "volatile", "while"]
+_C_KEYWORDS = """
+    alignas alignof auto bool break case char const constexpr continue default do double else enum extern false float
+    for goto if inline int long nullptr register restrict return short signed sizeof static static_assert struct switch
+    thread_local true typedef typeof typeof_unqual union unsigned void volatile while
+"""
 
 # ISO C++23, [lex.key] and the alternative tokens of [lex.digraph].
-_CPP_KEYWORDS = ["alignas", "alignof", "and", "and_eq", "asm", "auto", "bitand", "bitor", "bool", "break", "case", "catch", "char", "char8_t", "char16_t", "char32_t", "class", "compl", "concept", "const", "consteval", "constexpr", "constinit", "const_cast", "continue", "co_await", "co_return", "co_yield", "decltype", "default", "delete", "do", "double", "dynamic_cast", "else", "enum", "explicit", "export", "extern", "false", "float", "for", "friend", "goto", "if", "inline", "int", "long", "mutable", "namespace", "new", "noexcept", "not", "not_eq", "nullptr", "operator", "or", "or_eq", "private", "protected", "public", "register", "reinterpret_cast", "requires", "return", "short", "signed", "sizeof", "static", "static_assert", "static_cast", "struct", "switch", "template", "this", "thread_local", "throw", "true", "try", "typedef", "typeid", "typename", "union", "unsigned", "using", "virtual", "void", "volatile", "wchar_t", "while", "xor", "xor_eq"]
+_CPP_KEYWORDS = """
+    alignas alignof and and_eq asm auto bitand bitor bool break case catch char char8_t char16_t char32_t class compl
+    concept const consteval constexpr constinit const_cast continue co_await co_return co_yield decltype default delete
+    do double dynamic_cast else enum explicit export extern false float for friend goto if inline int long mutable
+    namespace new noexcept not not_eq nullptr operator or or_eq private protected public register reinterpret_cast
+    requires return short signed sizeof static static_assert static_cast struct switch template this thread_local throw
+    true try typedef typeid typename union unsigned using virtual void volatile wchar_t while xor xor_eq
+"""
 
 # What the Python artefact imports: an artefact of that name would import itself.
 _IMPORTED = ("math", "struct")
 
-_LANGUAGES = (("Python", frozenset(_PYTHON_KEYWORDS)), ("C", frozenset(_C_KEYWORDS)), ("C++", frozenset(_CPP_KEYWORDS)))
+_LANGUAGES = (
+    ("Python", frozenset(_PYTHON_KEYWORDS.split())),
+    ("C", frozenset(_C_KEYWORDS.split())),
+    ("C++", frozenset(_CPP_KEYWORDS.split())),
+)
 _NAME = re.compile(r"[a-z][a-z0-9_]*")
 _SUPERSCRIPTS = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹", "0123456789")
 # MICRO SIGN and GREEK SMALL LETTER MU look alike, and both are typed.
-_UNIT_WORDS = (("/", "_PER_"), ("°", "DEG_"), ("%", "PERCENT"), ("\N{MICRO SIGN}", "U"), ("\N{GREEK SMALL LETTER MU}", "U"))
+_UNIT_WORDS = (
+    ("/", "_PER_"),
+    ("°", "DEG_"),
+    ("%", "PERCENT"),
+    ("\N{MICRO SIGN}", "U"),
+    ("\N{GREEK SMALL LETTER MU}", "U"),
+)
 _HEADER = re.compile(r"(?P<name>.*\S)\s*(?:\[(?P<square>[^\[\]]*)\]|\((?P<round>[^()]*)\))\s*", re.DOTALL)
 
 

@@ -1,15 +1,12 @@
 """TOML -> frozen data classes, with every mistake of a plan reported at once.
 
 Decimals are exact: `gain = 0.1` means one tenth. Keys that the design has and the tool has not yet are refused with a
-sentence that says so, never ignored. This module opens the plan and nothing else; `table` opens the rows.
+sentence that says so, never ignored. This module reads tables; `plan_file` opens the plan, `table` the rows.
 """
 
 from __future__ import annotations
 
 import hashlib
-import re
-import sys
-import tomllib
 from dataclasses import dataclass
 from decimal import Decimal
 from fractions import Fraction
@@ -18,10 +15,8 @@ from pathlib import Path
 
 from runtime_min.errors import PlanError, Problem
 from runtime_min.names import NAME_RULE, c_input_name, name_problem
-from trainer.plan_checks import Section, Unreadable, decimal_text, exact, range_problem, shown
-
-LARGEST_PLAN = 1_000_000
-"""Bytes; a plan is written by hand."""
+from trainer.plan_checks import Section, decimal_text, exact, range_problem, shown
+from trainer.plan_file import parsed, plan_bytes
 
 LARGEST_SEED = 2**53 - 1
 """A seed goes into canonical JSON, which has no larger whole numbers."""
@@ -99,14 +94,14 @@ class Plan:
 
 def read_plan(path: Path) -> Plan:
     """The plan in the TOML file `path`. Raises PlanError with every problem."""
-    content = _content(path)
+    content = plan_bytes(path)
     problems: list[Problem] = []
-    top = Section(str(path), _parsed(path, content), problems)
+    top = Section(str(path), parsed(path, content), problems)
     top.refuse_other_keys(
         ("model", "purpose", "rows", "input", "prior", "decision", "device", "release"),
         {"term": ("functions of inputs are", "add them to the rows as columns and name these as inputs")},
     )
-    model = top.text("model", None, "name the model, for example model = \"pump\"")
+    model = top.text("model", None, 'name the model, for example model = "pump"')
     if model and (problem := name_problem(model)):
         top.report("model", problem, NAME_RULE)
     rows = _rows(top.section("rows"), path.parent)
@@ -128,53 +123,6 @@ def read_plan(path: Path) -> Plan:
     if problems:
         raise PlanError(problems)
     return plan
-
-
-def _content(path: Path) -> bytes:
-    try:
-        with path.open("rb") as stream:
-            content = stream.read(LARGEST_PLAN + 1)
-    except FileNotFoundError:
-        raise PlanError(Problem(str(path), "found no such file", "give the path of a plan")) from None
-    except IsADirectoryError:
-        raise PlanError(Problem(str(path), "found a folder", "give the path of a plan")) from None
-    except OSError as error:
-        raise PlanError(Problem(str(path), f"cannot be read ({error.strerror})", "make it readable")) from None
-    except ValueError:
-        raise PlanError(Problem(shown(str(path)), "found no path", "give the path of a plan")) from None
-    if len(content) > LARGEST_PLAN:
-        todo = "give a plan, and name the rows in it"
-        raise PlanError(Problem(str(path), f"found more than {LARGEST_PLAN} bytes", todo))
-    return content
-
-
-def _parsed(path: Path, content: bytes) -> dict[str, object]:
-    where = str(path)
-    try:
-        text = content.decode("utf-8-sig")
-    except UnicodeDecodeError as error:
-        line = content.count(b"\n", 0, error.start) + 1
-        raise PlanError(Problem(f"{where}: line {line}", "found text that is not UTF-8", "save it as UTF-8")) from None
-    try:
-        return tomllib.loads(text, parse_float=_decimal)
-    except tomllib.TOMLDecodeError as error:
-        raise PlanError(Problem(where, f"found text that is not TOML: {error}", "correct it there")) from None
-    except (ValueError, ArithmeticError):
-        # Python refuses to read a whole number of more digits than this, and does not say where it stands.
-        limit = sys.get_int_max_str_digits()
-        long = re.search(rf"[0-9_]{{{limit + 1},}}", text)
-        line = text.count("\n", 0, long.start()) + 1 if long else 1
-        found = f"found a whole number of more than {limit} digits" if long else "found a number that cannot be read"
-        raise PlanError(Problem(f"{where}: line {line}", found, "write a number of ordinary size")) from None
-    except RecursionError:
-        raise PlanError(Problem(where, "found brackets nested too deep", "write a plan of ordinary shape")) from None
-
-
-def _decimal(text: str) -> Decimal | Unreadable:
-    try:
-        return Decimal(text)
-    except ArithmeticError:
-        return Unreadable(text)
 
 
 def _rows(section: Section, folder: Path) -> RowsPlan:
@@ -291,7 +239,7 @@ def _levels(section: Section, outside: str) -> tuple[str, ...]:
         section.report("levels", f"found {len(value)}", todo)
     for key in ("range", "unit"):
         if key in section.table:
-            section.report(key, f"found a {key} beside levels", "remove one of the two: a level is a position in the list")
+            section.report(key, "found beside levels", "remove one of the two: a level is a position in the list")
     if outside == "clamp":
         section.report("outside", 'found "clamp" beside levels', "remove it: what is not a level is a fault")
     return levels

@@ -179,9 +179,16 @@ def decimal_text(value: Fraction) -> str:
 
 
 def either(choices: Sequence[str]) -> str:
-    """"a", "b" or "c"."""
+    """ "a", "b" or "c"."""
     quoted = [f'"{choice}"' for choice in choices]
     return " or ".join([", ".join(quoted[:-1]), quoted[-1]]) if len(quoted) > 1 else quoted[0]
+
+
+def listed(texts: Iterable[str]) -> str:
+    """ "a", "b", "c": at most five of them, and how many more."""
+    texts = list(texts)
+    more = f" and {len(texts) - 5} more" if len(texts) > 5 else ""
+    return ", ".join(shown(text) for text in texts[:5]) + more
 
 
 def shown(value: object) -> str:
@@ -206,7 +213,7 @@ def shortened(text: str) -> str:
 
 
 def _too_large(text: str) -> str:
-    return f"found {shortened(text)}, outside the exponents -{LARGEST_EXPONENT} to {LARGEST_EXPONENT} that a plan may use"
+    return f"found {shortened(text)}, whose exponent is beyond the {LARGEST_EXPONENT} that a plan may use"
 
 
 def _too_long(digits: int) -> str:
