@@ -69,9 +69,8 @@ class Findings:
         first = [problem for _, _, problem in sorted(self._kept)[:PROBLEMS_SHOWN]]
         more = self._counts.total() - len(first)
         if more:
-            first.append(
-                Problem(self._where, f"found {more} more problem{'s' if more > 1 else ''}", "mend these first")
-            )
+            found = f"found {more} more problem{'s' if more > 1 else ''}"
+            first.append(Problem(self._where, found, "mend these first"))
         if first or self._last:
             raise RowsError(first + self._last)
 
@@ -138,10 +137,7 @@ def _number(cell: str) -> float:
 
 def _not_a_number(cell: str, refusal: str) -> tuple[str, str]:
     if cell.strip().lower().lstrip("+-") in ("nan", "inf", "infinity"):
-        return (
-            f"found {shown(cell)}, not a finite number",
-            "correct it, or leave the field empty where a value is missing",
-        )
+        return f"found {shown(cell)}, not a finite number", "leave the field empty where a value is missing"
     if math.isinf(_number(cell)):
         return f"found {shown(cell)}, too large for binary64", "correct it"
     return f"found {shown(cell)}, not a number", refusal

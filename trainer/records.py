@@ -66,9 +66,8 @@ class Lines:
         self.record_bytes += len(raw)
         if self.record_bytes > LONGEST_RECORD:
             found = f"found a row of more than {LONGEST_RECORD} bytes"
-            raise RowsError(
-                Problem(self.here(), found, "look for a quote that is never closed, or for missing line ends")
-            )
+            todo = "look for missing line ends, or for a quote that is never closed"
+            raise RowsError(Problem(self.here(), found, todo))
         self._digest.update(raw)
         if self.number == 1:
             raw = raw.removeprefix(b"\xef\xbb\xbf")

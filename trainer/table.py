@@ -79,9 +79,8 @@ def read_rows(plan: Plan) -> Rows:
     values = values[kept]
     classes, labels = _labels(plan, label, kept, where)
     inputs = _completed(plan, inputs, values, where)
-    keys = row_keys(
-        [classes[index] for index in labels], [_parsed(*pair) for pair in zip(inputs, values.T, strict=True)]
-    )
+    parsed = [_parsed(entry, column) for entry, column in zip(inputs, values.T, strict=True)]
+    keys = row_keys([classes[index] for index in labels], parsed)
     for position, entry in enumerate(inputs):
         if entry.outside == "clamp" and entry.low is not None and entry.high is not None:
             values[:, position] = np.clip(values[:, position], float(entry.low), float(entry.high))
@@ -111,9 +110,8 @@ def _columns(plan: Plan, header: list[str], where: str) -> tuple[tuple[InputPlan
         grows=classes is None,
         may_be_missing=False,
     )
-    measured = [
-        _measured(entry, position, bool(plan.inputs)) for entry, position in zip(inputs, positions, strict=True)
-    ]
+    named = bool(plan.inputs)
+    measured = [_measured(entry, position, named) for entry, position in zip(inputs, positions, strict=True)]
     return inputs, label, measured
 
 
