@@ -152,12 +152,13 @@ def _rows(section: Section, folder: Path) -> RowsPlan:
 def _classes(section: Section) -> tuple[str, ...] | None:
     if "classes" not in section.table:
         return None
-    classes = section.texts("classes", "list two classes, the event last")
+    todo = "list two classes, the event last"
+    classes = section.texts("classes", todo)
     value = section.table["classes"]
     if isinstance(value, list) and len(value) > 2:
-        section.report("classes", f"found {len(value)}: more than two are not there yet", "list two, the event last")
+        section.report("classes", f"found {len(value)}: more than two are not there yet", todo)
     elif isinstance(value, list) and len(value) < 2:
-        section.report("classes", f"found {len(value)}", "list two classes, the event last")
+        section.report("classes", f"found {len(value)}", todo)
     return classes
 
 

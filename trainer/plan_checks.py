@@ -14,9 +14,8 @@ from collections.abc import Iterable, Mapping, Sequence
 from decimal import Decimal
 from fractions import Fraction
 
-import numpy as np
-
 from runtime_min.errors import Problem
+from runtime_min.sealing import round_to
 
 # Fraction(Decimal("1e30000000")) never returns; no measured quantity needs more than this.
 LARGEST_EXPONENT = 400
@@ -147,7 +146,7 @@ def range_problem(low: Fraction, high: Fraction, arithmetic: str) -> tuple[str, 
         return f"found {decimal_text(low)} before {decimal_text(high)}", "put the lower limit first"
     if low == high:
         return f"found {decimal_text(low)} twice, a range without width", "write two different limits"
-    rounded = [device_number(limit, arithmetic) for limit in (low, high)]
+    rounded = [round_to(arithmetic, limit) for limit in (low, high)]
     for limit, number in zip((low, high), rounded, strict=True):
         if not math.isfinite(number):
             return f"found {decimal_text(limit)}, too large for {arithmetic}", "write a limit that the device can hold"
@@ -157,16 +156,6 @@ def range_problem(low: Fraction, high: Fraction, arithmetic: str) -> tuple[str, 
             "write limits farther apart",
         )
     return None
-
-
-def device_number(value: Fraction, arithmetic: str) -> float:
-    """`value` rounded to `arithmetic`, "binary32" or "binary64"; infinite where it is too large."""
-    try:
-        number = float(value)
-    except OverflowError:
-        return math.inf if value > 0 else -math.inf
-    with np.errstate(over="ignore", under="ignore"):
-        return float(np.float32(number)) if arithmetic == "binary32" else number
 
 
 def decimal_text(value: Fraction) -> str:
