@@ -1,0 +1,259 @@
+"""Run every artefact of a release for real, and hold it against the vectors, the witness and the budget.
+
+The order is the argument: the files are the ones that were written; the sealed model follows from the trained one and
+everything else from the sealed one; the reference scorer gives the vectors' bits and stays within the budget of what
+training itself computed; and each artefact, run, gives the same bits. Nothing of the plan or the rows is needed.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, replace
+from fractions import Fraction
+from pathlib import Path
+from typing import Any
+
+from export import vectors
+from export.attack import Attack, attack
+from export.budget import Budget, advise, derive, witness_misses
+from export.contents import MANIFEST, MANIFEST_FORMAT, contents
+from export.diagnose import differences
+from export.targets import TARGETS, Run, Vector
+from export.vector_files import read_vectors
+from runtime_min.codec import load, load_trained, sealed_text
+from runtime_min.errors import BudgetError, FirmlogitError, Problem, ReleaseError
+from runtime_min.model import SealedModel, TrainedModel
+from runtime_min.sealing import seal_request
+
+
+@dataclass(frozen=True)
+class Check:
+    """One check: of what, how, whether it ran and held, how many rows (or files) differ, and one sentence."""
+
+    artefact: str
+    what: str
+    ran: bool
+    ok: bool
+    differences: int
+    found: str
+    target: str = ""
+
+
+@dataclass(frozen=True)
+class Report:
+    """All checks of one release. `accepted`: targets that may stand without having run."""
+
+    model_id: str
+    release: str | None
+    checks: tuple[Check, ...]
+    budget: Budget | None
+    attack: Attack | None
+    tolerance: Fraction | None
+    accepted: tuple[str, ...]
+
+    @property
+    def ok(self) -> bool:
+        """Every check held, and every artefact ran or was accepted without."""
+        return all(entry.ok or (not entry.ran and entry.target in self.accepted) for entry in self.checks)
+
+    @property
+    def broken(self) -> bool:
+        """A check ran and did not hold."""
+        return any(entry.ran and not entry.ok for entry in self.checks)
+
+
+def hold_tolerance(trained: TrainedModel, sealed: SealedModel) -> Budget:
+    """The error budget. Raises BudgetError where it is larger than the tolerance: what costs most, what would fit."""
+    budget = derive(trained, sealed)
+    tolerance = sealed.about.request.tolerance
+    if tolerance is not None and not budget.log_odds <= Fraction(tolerance):
+        raise BudgetError(advise(trained, sealed, budget, Fraction(tolerance)))
+    return budget
+
+
+def check_release(
+    into: str | Path,
+    *,
+    thorough: bool = False,
+    unchecked: Sequence[str] = (),
+    compare_text: bool = True,
+    progress: Callable[[str], None] = lambda step: None,
+) -> Report:
+    """Check a release folder; it may be a copy, far from plan and rows.
+
+    thorough: every way of running each artefact and a longer attack. unchecked: targets that need not run.
+    compare_text: also write every file anew and compare bytes (off, only running can find a mistake).
+
+    Raises ReleaseError where the folder is no release.
+    """
+    into = Path(into)
+    manifest = _read_manifest(into)
+    report = Report(str(manifest["model_id"]), str(into), (), None, None, None, tuple(unchecked))
+    checks: list[Check] = [_digests(into, manifest)]
+    try:
+        sealed = load(into / f"{manifest['model']}.sealed.json")
+        trained = load_trained(into / f"{manifest['model']}.trained.json")
+        vectors_on_file = read_vectors(sealed, into / "vectors.csv")
+    except FirmlogitError as error:
+        name = Path(error.problems[0].where.partition(": ")[0]).name
+        checks.append(_judged(name, "loads", len(error.problems), str(error.problems[0])))
+        return replace(report, checks=tuple(checks))
+    checks += _same_model(into, manifest, sealed, trained, compare_text)
+    checks.append(_reference(sealed, vectors_on_file, into / "vectors.csv"))
+    progress("deriving the error budget and attacking it")
+    budget_checks, budget, found = _budget(trained, sealed, thorough)
+    checks += budget_checks
+    for name in manifest["write"]:
+        progress(f"running {TARGETS[name].file(sealed)}")
+        artefact = into / TARGETS[name].file(sealed)
+        for run in TARGETS[name].run(artefact, sealed, [vector.inputs for vector in vectors_on_file], thorough):
+            checks.append(_compared(sealed, vectors_on_file, run, artefact.name, name))
+    tolerance = sealed.about.request.tolerance
+    return replace(
+        report,
+        checks=tuple(checks),
+        budget=budget,
+        attack=found,
+        tolerance=None if tolerance is None else Fraction(tolerance),
+    )
+
+
+def _judged(artefact: str, what: str, count: int, found: str) -> Check:
+    return Check(artefact, what, True, count == 0, count, found)
+
+
+def _read_manifest(into: Path) -> dict[str, Any]:
+    path = into / MANIFEST
+    try:
+        manifest = json.loads(path.read_bytes())
+    except OSError as error:
+        raise ReleaseError(
+            Problem(str(path), f"cannot be read ({error.strerror})", "name the folder of a release")
+        ) from None
+    except ValueError as error:
+        raise ReleaseError(Problem(str(path), f"is not JSON ({error})", "copy the release again")) from None
+    wanted = {"format": str, "model": str, "model_id": str, "write": list, "files": dict}
+    if not isinstance(manifest, dict) or manifest.get("format") != MANIFEST_FORMAT:
+        raise ReleaseError(Problem(str(path), "is not the manifest of a release", "name the folder of a release"))
+    wrong = [key for key, kind in wanted.items() if not isinstance(manifest.get(key), kind)]
+    wrong += [f"write: {name}" for name in manifest["write"] if name not in TARGETS] if not wrong else []
+    wrong += [f"files: {name}" for name in manifest["files"] if Path(name).name != name] if not wrong else []
+    if "/" in str(manifest.get("model")) or wrong:
+        raise ReleaseError(Problem(str(path), "is damaged at " + ", ".join(wrong or ["model"]), "copy the release again"))
+    return manifest
+
+
+def _digests(into: Path, manifest: dict[str, Any]) -> Check:
+    other = []
+    for name, digest in manifest["files"].items():
+        try:
+            same = hashlib.sha256((into / name).read_bytes()).hexdigest() == digest
+        except OSError:
+            same = False
+        if not same:
+            other.append(name)
+    found = f"{len(manifest['files'])} files as written" if not other else f"not as written: {', '.join(other)}"
+    return _judged(MANIFEST, "digest of every file", len(other), found)
+
+
+def _same_model(
+    into: Path, manifest: dict[str, Any], sealed: SealedModel, trained: TrainedModel, compare_text: bool
+) -> Iterator[Check]:
+    name = f"{sealed.name}.sealed.json"
+    same = sealed.model_id == manifest["model_id"]
+    found = sealed.model_id if same else f"the sealed model is {sealed.model_id}, the manifest names another"
+    yield _judged(name, "model id", int(not same), found)
+    try:
+        again = seal_request(trained, sealed.about.request, sealed.about.purpose, sealed.about.plan_sha256)
+        other = _first_other(sealed_text(sealed), sealed_text(again))
+    except FirmlogitError as error:
+        other = str(error.problems[0])
+    yield _judged(name, "sealed anew", int(bool(other)), other or "every number follows from the trained model")
+    if compare_text:
+        made = vectors.make_vectors(sealed)
+        files = contents(sealed, trained, manifest["write"], made)
+        differing = [file for file, data in files.items() if not _holds(into / file, data)]
+        found = f"{len(files)} files, byte for byte" if not differing else f"other bytes in {', '.join(differing)}"
+        yield _judged("every file", "written anew", len(differing), found)
+
+
+def _holds(path: Path, data: bytes) -> bool:
+    try:
+        return path.read_bytes() == data
+    except OSError:
+        return False
+
+
+def _first_other(have: str, want: str) -> str:
+    """Where two sealed files part, in words; empty where they do not."""
+
+    def leaves(value: Any, place: str) -> Iterator[tuple[str, Any]]:
+        if isinstance(value, dict):
+            for key, entry in value.items():
+                yield from leaves(entry, f"{place}.{key}" if place else key)
+        elif isinstance(value, list):
+            for position, entry in enumerate(value):
+                yield from leaves(entry, f"{place}[{position}]")
+        else:
+            yield place, value
+
+    if have == want:
+        return ""
+    wanted = dict(leaves(json.loads(want), ""))
+    found = dict(leaves(json.loads(have), ""))
+    for place in wanted:
+        if found.get(place) != wanted[place]:
+            return f"{place} is {found.get(place)!r}, the trained model gives {wanted[place]!r}"
+    return "has numbers that the trained model does not give"
+
+
+def _reference(sealed: SealedModel, on_file: Sequence[Vector], path: Path) -> Check:
+    """The vectors on file against the reference scorer, and against the rows that this model must be tried on."""
+    wrong = [row for row, vector in enumerate(on_file) if vectors.expected(sealed, vector.inputs) != vector.expected]
+    found = f"the reference scorer gives the bits of all {len(on_file)} rows"
+    if wrong:
+        found = f"line {wrong[0] + 2} ({on_file[wrong[0]].kind}) is not what the reference scorer gives"
+    return _judged(path.name, "reference scorer", len(wrong), found)
+
+
+def _budget(
+    trained: TrainedModel, sealed: SealedModel, thorough: bool
+) -> tuple[list[Check], Budget | None, Attack | None]:
+    name = f"{sealed.name}.sealed.json"
+    try:
+        budget = derive(trained, sealed)
+    except FirmlogitError as error:
+        return [_judged(name, "error budget", 1, str(error.problems[0]))], None, None
+    tolerance = sealed.about.request.tolerance
+    over = tolerance is not None and not budget.log_odds <= Fraction(tolerance)
+    bound = f"{float(budget.log_odds):.3g}"
+    allowed = f"tolerance {float(Fraction(tolerance)):.3g}" if tolerance is not None else "no tolerance stated"
+    checks = [_judged(name, "error budget", int(over), f"{bound} in log-odds, {allowed}")]
+    found = attack(trained, sealed, budget, seed=int(sealed.model_id, 16), thorough=thorough)
+    broken = not found.share <= 1
+    sentence = f"worst error found {float(found.worst):.3g}, {found.share:.0%} of the bound, in {found.tried:,} rows"
+    checks.append(_judged(name, "attack on the budget", int(broken), sentence))
+    seen = witness_misses(trained, sealed, budget)
+    sentence = f"{seen.compared} rows within budget and bound, the nearest at {seen.largest:.0%} of what is allowed"
+    if seen.rows:
+        sentence = f"{len(seen.rows)} of {seen.compared} rows off: row {seen.rows[0] + 1} is the first"
+    elif not seen.compared:
+        sentence = "no witness row lies within the ranges"
+    checks.append(_judged("witness.csv", "reference scorer", len(seen.rows) or int(not seen.compared), sentence))
+    return checks, budget, found
+
+
+def _compared(sealed: SealedModel, on_file: Sequence[Vector], run: Run, artefact: str, target: str) -> Check:
+    if run.trouble is not None:
+        return Check(artefact, run.what, run.ran, False, 0, run.trouble, target)
+    if run.model_id is not None and run.model_id != sealed.model_id:
+        found = f"the artefact says model {run.model_id}, the release is {sealed.model_id}"
+        return Check(artefact, run.what, True, False, 1, found, target)
+    wrong, where = differences(sealed, on_file, run.outputs)
+    if run.self_test:
+        says = f"its self-test returned {run.self_test}"
+        return Check(artefact, run.what, True, False, max(wrong, 1), f"{says}; {where}" if where else says, target)
+    found = where or f"{len(on_file)} rows, the same bits"
+    return Check(artefact, run.what, True, wrong == 0, wrong, found, target)

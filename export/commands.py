@@ -1,0 +1,220 @@
+"""The command line: reads the request, calls the rooms in order, prints, and turns every mistake into a sentence.
+
+Rooms are imported inside the functions that need them, so that `--help` costs nothing and only here do the trainer and
+the exporter meet.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from runtime_min.errors import FirmlogitError, Problem, ReleaseError
+
+if TYPE_CHECKING:
+    from export.check import Check
+    from runtime_min.model import SealedModel, TrainedModel
+    from trainer.plan import Plan
+    from trainer.table import Rows
+
+CAUTION = "A statistical classifier is not a safety function."
+
+
+def main(arguments: list[str] | None = None) -> int:
+    """Exit status: 0 done and every check held; 1 a check or the budget failed; 2 the request or data were wrong."""
+    request = _parser().parse_args(arguments)
+    try:
+        return int(request.run(request))
+    except FirmlogitError as error:
+        print(error, file=sys.stderr)
+        return error.exit_status
+    except KeyboardInterrupt:
+        print("stopped; a release that was there before is as it was", file=sys.stderr)
+        return 130
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="firmlogit",
+        description="Labelled measurements to a classifier on a device, with the proof attached.",
+        epilog=CAUTION,
+    )
+    commands = parser.add_subparsers(title="commands", required=True, metavar="COMMAND")
+
+    ship = commands.add_parser("ship", help="the whole job: fit, seal, write, run and check a release")
+    ship.add_argument("plan", type=Path, help="the plan, a TOML file")
+    ship.add_argument("--into", type=Path, metavar="FOLDER", help="the release (default: release/ beside the plan)")
+    _check_options(ship)
+    ship.set_defaults(run=_ship)
+
+    fit = commands.add_parser("fit", help="write the trained and the sealed model only")
+    fit.add_argument("plan", type=Path, help="the plan, a TOML file")
+    fit.add_argument("--into", type=Path, metavar="FOLDER", help="where to (default: beside the plan)")
+    fit.set_defaults(run=_fit)
+
+    export = commands.add_parser("export", help="write the artefacts of a sealed model, without running them")
+    export.add_argument("sealed", type=Path, help="NAME.sealed.json")
+    export.add_argument("--into", type=Path, metavar="FOLDER", default=Path("artefacts"), help="default: artefacts/")
+    export.set_defaults(run=_export)
+
+    check = commands.add_parser("check", help="run every artefact of a release again")
+    check.add_argument("release", type=Path, help="the folder of a release, or a copy of it")
+    _check_options(check)
+    check.set_defaults(run=_check)
+
+    score = commands.add_parser("score", help="score a CSV with a sealed model")
+    score.add_argument("sealed", type=Path, help="NAME.sealed.json")
+    score.add_argument("rows", type=Path, help="a CSV with a column for each input")
+    score.set_defaults(run=_score)
+    return parser
+
+
+def _check_options(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("--all", action="store_true", help="every compiler, dialect and option that is here")
+    parser.add_argument(
+        "--unchecked", action="append", default=[], metavar="ARTEFACT", help="accept python, c or onnx without a run"
+    )
+    parser.add_argument("--json", action="store_true", help="print the result for a program")
+
+
+def _ship(request: argparse.Namespace) -> int:
+    from export.report import check_lines, fit_lines, model_line, report_json
+
+    with _progress() as progress:
+        progress("reading the plan")
+        plan, rows, trained, sealed = _fitted(request.plan, progress)
+        from export.release import write_release
+
+        if not request.json:
+            _print([model_line(sealed), *fit_lines(trained)])
+        report = write_release(
+            sealed,
+            trained,
+            request.into or plan.path.parent / "release",
+            write=plan.write,
+            thorough=request.all,
+            unchecked=_unchecked(request),
+            fit_checks=(_fit_check(plan, trained, sealed),),
+            progress=progress,
+        )
+    _print([report_json(report)] if request.json else check_lines(report))
+    return 0 if report.ok else 1
+
+
+def _fit(request: argparse.Namespace) -> int:
+    from export.folder import write_files
+    from export.report import fit_lines, model_line
+    from runtime_min.codec import sealed_text, trained_text
+
+    with _progress() as progress:
+        plan, _, trained, sealed = _fitted(request.plan, progress)
+    into = request.into or plan.path.parent
+    written = {
+        f"{plan.model}.trained.json": trained_text(trained).encode(),
+        f"{plan.model}.sealed.json": sealed_text(sealed).encode(),
+    }
+    write_files(into, written)
+    _print([model_line(sealed), *fit_lines(trained), *(f"{'written':<12}{into / name}" for name in written)])
+    return 0
+
+
+def _export(request: argparse.Namespace) -> int:
+    from export.release import export_artefacts
+    from export.targets import TARGETS
+    from runtime_min.codec import load
+
+    sealed = load(request.sealed)
+    for name in export_artefacts(sealed, request.into, tuple(TARGETS)):
+        _print([f"{'written':<12}{request.into / name}"])
+    return 0
+
+
+def _check(request: argparse.Namespace) -> int:
+    from export.check import check_release
+    from export.report import check_lines, report_json
+
+    with _progress() as progress:
+        report = check_release(
+            request.release, thorough=request.all, unchecked=_unchecked(request), progress=progress
+        )
+    _print([report_json(report)] if request.json else [f"{'model':<12}{report.model_id}", *check_lines(report)])
+    return 0 if report.ok else 1
+
+
+def _score(request: argparse.Namespace) -> int:
+    from runtime_min.__main__ import score_rows
+    from runtime_min.codec import load
+
+    score_rows(load(request.sealed), request.rows, sys.stdout)
+    return 0
+
+
+def _fitted(path: Path, progress: Callable[[str], None]) -> tuple[Plan, Rows, TrainedModel, SealedModel]:
+    from runtime_min.sealing import seal_request
+    from trainer.fit import fit_plan
+    from trainer.plan import read_plan
+    from trainer.request import request_of
+    from trainer.table import read_rows
+
+    plan = read_plan(path)
+    progress("reading the rows")
+    rows = read_rows(plan)
+    progress("fitting")
+    trained = fit_plan(plan, rows)
+    return plan, rows, trained, seal_request(trained, request_of(plan, rows), plan.purpose, plan.sha256)
+
+
+def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
+    """The fit against its own optimality condition, recomputed from the file."""
+    from export.check import Check
+    from export.optimality import Source, recheck_fit
+
+    source = Source(plan.rows.file, plan.rows.label, plan.rows.held_out, plan.rows.seed)
+    found = recheck_fit(trained, sealed.about.request, source)
+    sentence = "; ".join(found.problems)
+    if not found.problems:
+        sentence = f"{found.rows:,} raw rows give the same centres, scales and optimum (within {found.step:.1e} posterior sd)"
+    return Check(
+        f"{plan.model}.trained.json", "optimality from raw rows", True, not found.problems, len(found.problems), sentence
+    )
+
+
+def _unchecked(request: argparse.Namespace) -> tuple[str, ...]:
+    from export.targets import TARGETS
+
+    for name in request.unchecked:
+        if name not in TARGETS:
+            raise ReleaseError(Problem("--unchecked", f'found "{name}"', "name one of " + ", ".join(TARGETS)))
+    return tuple(request.unchecked)
+
+
+def _print(lines: list[str]) -> None:
+    """Print in whatever encoding the terminal or pipe has; what it cannot show becomes an escape."""
+    encoding = sys.stdout.encoding or "ascii"
+    for line in lines:
+        print(line.encode(encoding, "backslashreplace").decode(encoding))
+
+
+@contextmanager
+def _progress() -> Iterator[Callable[[str], None]]:
+    """A line on standard error that says what is being done; nothing where that is not a terminal."""
+    if not sys.stderr.isatty():
+        yield lambda step: None
+        return
+    from rich.console import Console
+
+    console = Console(stderr=True)
+    with console.status("starting") as status:
+        yield lambda step: status.update(step)
+
+
+if __name__ == "__main__":
+    sys.exit(main())

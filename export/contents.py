@@ -1,0 +1,41 @@
+"""What a release holds: every file that follows from the sealed and the trained model, as bytes. Nothing is written here."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from export.handoff import coefficients_csv, handoff_md
+from export.targets import TARGETS, Vector
+from export.targets.c.vectors_header import emit_vectors_header
+from export.vector_files import vectors_csv, witness_csv
+from export.vectors import self_test_of
+from runtime_min.codec import sealed_text, trained_text
+from runtime_min.model import SealedModel, TrainedModel
+
+MANIFEST = "manifest.json"
+MANIFEST_FORMAT = "firmlogit release 1"
+
+
+def artefacts(sealed: SealedModel, write: Sequence[str], vectors: Sequence[Vector]) -> dict[str, bytes]:
+    """Every file that follows from the sealed model alone."""
+    self_test = self_test_of(sealed, vectors)
+    files = {TARGETS[name].file(sealed): TARGETS[name].emit(sealed, self_test) for name in write}
+    return {
+        **files,
+        f"{sealed.name}.sealed.json": sealed_text(sealed).encode(),
+        "coefficients.csv": coefficients_csv(sealed),
+        "HANDOFF.md": handoff_md(sealed, vectors, write),
+        "vectors.csv": vectors_csv(sealed, vectors),
+        "vectors.h": emit_vectors_header(sealed, vectors),
+    }
+
+
+def contents(
+    sealed: SealedModel, trained: TrainedModel, write: Sequence[str], vectors: Sequence[Vector]
+) -> dict[str, bytes]:
+    """Every file of a release but its manifest."""
+    return {
+        **artefacts(sealed, write, vectors),
+        f"{sealed.name}.trained.json": trained_text(trained).encode(),
+        "witness.csv": witness_csv(trained),
+    }

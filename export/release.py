@@ -1,0 +1,119 @@
+"""The release folder: what is in it, its manifest, and writing it whole or not at all."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import platform
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+from export import check, folder
+from export.contents import MANIFEST, MANIFEST_FORMAT, artefacts, contents
+from export.targets import TARGETS
+from export.vectors import make_vectors
+from runtime_min.errors import Problem, ReleaseError
+from runtime_min.model import SealedModel, TrainedModel
+
+def write_release(
+    sealed: SealedModel,
+    trained: TrainedModel,
+    into: str | Path,
+    *,
+    write: Sequence[str] = tuple(TARGETS),
+    thorough: bool = False,
+    unchecked: Sequence[str] = (),
+    fit_checks: Sequence[check.Check] = (),
+    progress: Callable[[str], None] = lambda step: None,
+) -> check.Report:
+    """Write every artefact, run it, and put the release in its place.
+
+    sealed, trained: from `seal` and `fit_map`. into: the release folder. write: targets by name. thorough: run each
+    artefact in every way, not in a quick subset. unchecked: targets that may be released without having run.
+    fit_checks: checks of the fit that were made beforehand, to stand in the same report.
+
+    Returns the report; `report.ok` tells whether every check held and ran. A release in which an artefact could not be
+    run is written (and `ok` is False); one in which a check found a difference is not, and an old release stays as it
+    was. Raises BudgetError where the error budget is larger than the tolerance, ReleaseError where the folder cannot
+    be written.
+    """
+    into = Path(into)
+    _refuse_foreign(into)
+    check.hold_tolerance(trained, sealed)
+    progress("writing the artefacts")
+    vectors = make_vectors(sealed)
+    files = contents(sealed, trained, write, vectors)
+    with folder.building(into) as staging:
+        for name, data in files.items():
+            (staging / name).write_bytes(data)
+        _write_manifest(staging, sealed, files, write, ())
+        report = check.check_release(staging, thorough=thorough, unchecked=unchecked, progress=progress)
+        report = replace(report, checks=(*fit_checks, *report.checks), release=str(into))
+        if report.broken:
+            return replace(report, release=None)
+        _write_manifest(staging, sealed, files, write, report.checks)
+        folder.put_in_place(staging, into)
+    return report
+
+
+def export_artefacts(sealed: SealedModel, into: Path, write: Sequence[str]) -> tuple[str, ...]:
+    """Write what follows from a sealed model alone, unchecked, as one folder; returns the names of the files."""
+    _refuse_foreign(into)
+    files = artefacts(sealed, write, make_vectors(sealed))
+    with folder.building(into) as staging:
+        for name, data in files.items():
+            (staging / name).write_bytes(data)
+        _write_manifest(staging, sealed, files, write, ())
+        folder.put_in_place(staging, into)
+    return tuple(sorted(files))
+
+
+def _refuse_foreign(into: Path) -> None:
+    """A folder that is no release is never replaced."""
+    if not into.exists() and not into.is_symlink():
+        return
+    if into.is_dir() and not into.is_symlink():
+        if not any(into.iterdir()):
+            return
+        try:
+            if json.loads((into / MANIFEST).read_bytes())["format"] == MANIFEST_FORMAT:
+                return
+        except (OSError, ValueError, KeyError, TypeError):
+            pass
+    raise ReleaseError(Problem(str(into), "is there and is not a release", "choose another --into, or remove it"))
+
+
+def _write_manifest(
+    staging: Path,
+    sealed: SealedModel,
+    files: dict[str, bytes],
+    write: Sequence[str],
+    checks: Sequence[check.Check],
+) -> None:
+    manifest: dict[str, Any] = {
+        "format": MANIFEST_FORMAT,
+        "model": sealed.name,
+        "model_id": sealed.model_id,
+        "write": list(write),
+        "files": {name: hashlib.sha256(data).hexdigest() for name, data in sorted(files.items())},
+        "rows_sha256": sealed.about.rows_sha256,
+        "plan_sha256": sealed.about.plan_sha256,
+        "versions": _versions(sealed.about.tool),
+        "checks": [
+            {"artefact": entry.artefact, "what": entry.what, "ran": entry.ran, "ok": entry.ok} for entry in checks
+        ],
+    }
+    (staging / MANIFEST).write_text(json.dumps(manifest, indent=1, sort_keys=True) + "\n", encoding="utf-8")
+
+
+def _versions(tool: str) -> dict[str, str]:
+    found = {"firmlogit": tool.rpartition(" ")[2], "python": platform.python_version()}
+    for package in ("numpy", "scipy", "onnx", "onnxruntime"):
+        try:
+            found[package] = version(package)
+        except PackageNotFoundError:
+            found[package] = "not installed"
+    return found
