@@ -1,0 +1,109 @@
+"""Sealed model -> a Python module. The template reads like the module; here stands only what goes into it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from fractions import Fraction
+from pathlib import Path
+from typing import Any
+
+from jinja2 import Environment, StrictUndefined
+
+from export.targets import (
+    SELF_TEST_ROUNDING,
+    SELF_TEST_SUBNORMALS,
+    SELF_TEST_TABLES,
+    SELF_TEST_VECTOR,
+    SelfTest,
+)
+from export.targets.python import lexical
+from runtime_min.errors import Problem, ReleaseError
+from runtime_min.model import SealedModel
+
+TEMPLATE = Path(__file__).with_name("module.py.jinja")
+
+CODES = {
+    "tables": SELF_TEST_TABLES,
+    "rounding": SELF_TEST_ROUNDING,
+    "subnormals": SELF_TEST_SUBNORMALS,
+    "vector": SELF_TEST_VECTOR,
+}
+
+# The largest binary32 number is (2 - 2^-23) 2^127; below half of it no sum of rounded steps comes near.
+BINARY32_SAFE = Fraction(2) ** 127
+
+
+def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
+    """The module, in ASCII. Raises ReleaseError where a step could leave binary32 within the ranges."""
+    if sealed.arithmetic == "binary32" and not _largest_sum(sealed) <= BINARY32_SAFE:
+        found = "a step of the log-odds can be too large for binary32 within the ranges"
+        raise ReleaseError(Problem(f"{sealed.name}.py", found, "narrow the ranges, or choose binary64"))
+    text = _environment().from_string(TEMPLATE.read_text(encoding="utf-8")).render(
+        sealed=sealed, self_test=self_test, codes=CODES, **_parts(sealed)
+    )
+    return text.encode("ascii")
+
+
+def _environment() -> Environment:
+    environment = Environment(
+        undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True, autoescape=False
+    )
+    for rule in (lexical.number, lexical.value, lexical.string, lexical.docstring, lexical.comment, lexical.target):
+        environment.filters[rule.__name__] = rule
+    environment.filters["listed"] = lexical.listed
+    environment.globals.update(constant=lexical.constant, local=lexical.local)
+    return environment
+
+
+def _parts(sealed: SealedModel) -> dict[str, Any]:
+    """What the template needs beside the model: lists of names and expressions, one entry an input or term."""
+    names = [entry.name for entry in sealed.inputs]
+    steps = list(zip(sealed.inputs, sealed.terms, strict=True))
+    with_datum = [entry.name for entry, term in steps if term.datum is not None]
+    products = [entry.name for entry, term in steps if term.form == "value"]
+    return {
+        "single": sealed.arithmetic == "binary32",
+        "steps": steps,
+        "xs": [lexical.local("x", name) for name in names],
+        "floats": [f"float({lexical.local('x', name)})" for name in names],
+        "wrong_count": f"{sealed.name} takes {len(names)} inputs, found %d",
+        "ds": [lexical.local("d", name) for name in with_datum],
+        "differences": [f"{lexical.local('x', name)} - {lexical.constant('DATUM', name)}" for name in with_datum],
+        "ps": [lexical.local("p", name) for name in products],
+        "products": [
+            f"{lexical.constant('WEIGHT', name)} * {lexical.local('d' if name in with_datum else 'x', name)}"
+            for name in products
+        ],
+        "counts": sorted({1, 2, len(names), len(with_datum), len(products)} - {0}),
+        "coefficients": [f"C{degree}" for degree in range(len(sealed.exponential.coefficients))],
+        "tables": list(_tables(sealed)),
+    }
+
+
+def _tables(sealed: SealedModel) -> Iterator[str]:
+    """The module's name for each device number, in the order of `validity.device_numbers`, which is that of the CRC."""
+    for key in ("low", "high", "typical"):
+        for entry in sealed.inputs:
+            if getattr(entry, key) is not None:
+                yield lexical.constant(key.upper(), entry.name)
+    yield "INTERCEPT"
+    steps = list(zip(sealed.inputs, sealed.terms, strict=True))
+    for entry, term in steps:
+        if term.datum is not None:
+            yield lexical.constant("DATUM", entry.name)
+    for entry, term in steps:
+        yield lexical.constant("*WEIGHTS" if term.form == "level" else "WEIGHT", entry.name)
+    yield "*THRESHOLDS"
+    yield from ("INV_LN2", "LN2_FIRST", "LN2_REST", "EXP_FLOOR", "*EXP_COEFFICIENTS")
+
+
+def _largest_sum(sealed: SealedModel) -> Fraction:
+    """Bound on the size of every product and partial sum, before rounding, over the ranges."""
+    total = abs(Fraction(sealed.intercepts[0]))
+    for entry, term in zip(sealed.inputs, sealed.terms, strict=True):
+        if term.form == "level":
+            total += max(abs(Fraction(weight)) for weight in term.weights[0])
+        else:
+            reach = max(abs(Fraction(limit) - Fraction(term.datum or 0)) for limit in (entry.low, entry.high))
+            total += max(reach, abs(Fraction(term.weights[0][0])) * reach)
+    return total

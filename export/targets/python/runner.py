@@ -1,0 +1,90 @@
+"""Runs a generated module in a fresh interpreter that sees nothing else: no environment, site or current folder.
+
+Rows go in and outputs come back as the bits of binary64, so that nothing is rounded on the way.
+"""
+
+from __future__ import annotations
+
+import struct
+import subprocess
+import sys
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+
+from export.targets import Output, Run
+from runtime_min.arithmetic import ROUND, raw_bits
+from runtime_min.model import SealedModel
+
+TIME_LIMIT = 60.0  # seconds; a row takes microseconds
+
+# What the interpreter is told to do: arguments are the module's path and its name. First line: id and self-test.
+SCRIPT = """
+import importlib.util, struct, sys
+path, name, whole = sys.argv[1:]
+spec = importlib.util.spec_from_file_location(name, path)
+module = importlib.util.module_from_spec(spec)
+spec.loader.exec_module(module)
+def bits(x):
+    return "%016x" % struct.unpack("<Q", struct.pack("<d", x))[0]
+def number(text):
+    x = struct.unpack("<d", struct.pack("<Q", int(text, 16)))[0]
+    return int(x) if whole == "whole" and x == x // 1 and bits(x) != bits(-0.0) else x
+print(module.MODEL_ID, int(module.self_test()))
+for line in sys.stdin:
+    row = [number(text) for text in line.split()]
+    z, p = bits(module.log_odds(row)), bits(module.probability(row))
+    print(int(module.check_inputs(row)), z, p, int(module.decide(row)))
+"""
+
+# What is printed of a run, the interpreter's options, and whether whole numbers are passed as int.
+QUICK = (("CPython, fresh interpreter", (), "float"),)
+THOROUGH = (
+    *QUICK,
+    ("CPython, optimised (-O)", ("-O",), "float"),
+    ("CPython, whole numbers as int", (), "whole"),
+)
+
+
+def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], thorough: bool) -> Iterator[Run]:
+    """Every row through every function of the module, once a way."""
+    asked = "".join(" ".join(f"{_bits64(x):016x}" for x in row) + "\n" for row in rows)
+    for what, options, numbers in THOROUGH if thorough else QUICK:
+        command = [sys.executable, "-I", "-S", "-B", *options, "-c", SCRIPT, str(artefact), sealed.name, numbers]
+        what = f"{what}, {sys.version_info.major}.{sys.version_info.minor}"
+        try:
+            done = subprocess.run(command, input=asked, capture_output=True, text=True, timeout=TIME_LIMIT)
+        except subprocess.TimeoutExpired:
+            yield Run(what, True, f"did not end within {TIME_LIMIT:g} s", None, None, ())
+            continue
+        if done.returncode != 0:
+            last = (done.stderr.strip().splitlines() or [f"ended with status {done.returncode}"])[-1]
+            yield Run(what, True, last, None, None, ())
+            continue
+        try:
+            yield _read(what, sealed, done.stdout, len(rows))
+        except ValueError as error:
+            yield Run(what, True, f"printed what is no output: {error}", None, None, ())
+
+
+def _read(what: str, sealed: SealedModel, printed: str, count: int) -> Run:
+    first, *lines = printed.splitlines() or [""]
+    model_id, code = first.split()
+    if len(lines) != count:
+        raise ValueError(f"{len(lines)} rows of {count}")
+    return Run(what, True, None, model_id, int(code), tuple(_output(line.split(), sealed.arithmetic) for line in lines))
+
+
+def _output(fields: list[str], arithmetic: str) -> Output:
+    fault, log_odds, probability, decision = fields
+    return Output(int(fault), (_of(log_odds, arithmetic),), (_of(probability, arithmetic),), int(decision))
+
+
+def _of(text: str, arithmetic: str) -> int:
+    """The bits in the arithmetic; where the number is none of it, a pattern longer than any of its numbers."""
+    bits = int(text, 16)
+    (x,) = struct.unpack("<d", struct.pack("<Q", bits))
+    return raw_bits(x, arithmetic) if x != x or ROUND[arithmetic](x) == x else 1 << 64 | bits
+
+
+def _bits64(x: float) -> int:
+    return raw_bits(float(x), "binary64")
