@@ -10,6 +10,7 @@ from __future__ import annotations
 import hashlib
 import json
 import math
+import re
 import types
 import typing
 from dataclasses import fields, is_dataclass
@@ -79,6 +80,7 @@ def _raise_if(problems: list[tuple[str, str, str]], where: str) -> None:
         raise FileError(Problem(f"{where}: {place}", found, todo) for place, found, todo in problems)
 
 
+_SURROGATES = re.compile("[\ud800-\udfff]")
 _AGAIN = "take the file from the release again"
 
 
@@ -141,7 +143,8 @@ def _decode(kind: type, value: Any, place: str, where: str) -> Any:
                     problems.append(Problem(f"{where}: {place}.{name}", "is missing", _AGAIN))
             if not all(name in value for name in names):
                 return None
-            return kind(**{name: walk(hints[name], value[name], f"{place}.{name}") for name in names})
+            read = {name: walk(hints[name], value[name], f"{place}.{name}") for name in names}
+            return typing.cast(typing.Any, kind)(**read)
         return scalar(kind, value, place)
 
     def scalar(kind: Any, value: Any, place: str) -> Any:
@@ -155,8 +158,11 @@ def _decode(kind: type, value: Any, place: str, where: str) -> Any:
             return value
         if kind is int and isinstance(value, float) and value.is_integer():
             return int(value)
-        if (kind is bool and isinstance(value, bool)) or (kind is str and isinstance(value, str)):
+        if kind is bool and isinstance(value, bool):
             return value
+        if kind is str and isinstance(value, str):
+            # Half of a surrogate pair has no UTF-8 form, so the model could be neither hashed nor written.
+            return wrong(place, value, "a text without lone surrogates") if _SURROGATES.search(value) else value
         return wrong(place, value, {float: "a number", int: "an integer", bool: "true or false", str: "a text"}[kind])
 
     result = walk(kind, value, place)

@@ -15,6 +15,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from decimal import ROUND_HALF_EVEN, Context, Decimal
 from fractions import Fraction
+from typing import Any, cast
 
 from runtime_min.arithmetic import CONSTANTS
 from runtime_min.errors import Problem, SealError
@@ -168,7 +169,7 @@ def seal_request(
         terms=tuple(terms),
         intercepts=rounded_intercepts,
         decision=Thresholds(threshold, threshold),
-        exponential=Exponential(**constants),
+        exponential=Exponential(**cast(Any, constants)),
         about=About(purpose, request, trained.rows.sha256, plan_sha256, TOOL),
     )
     found = sealed_problems(sealed)
@@ -206,11 +207,22 @@ def seal(
         for key in ranges
         if key not in known
     ]
+    levels = {entry.name for entry in trained.inputs if entry.levels}
+    exact_ranges: dict[str, tuple[str, str]] = {}
     for key, limits in ranges.items():
-        if len(limits) != 2 or not all(math.isfinite(limit) for limit in limits) or not limits[0] < limits[1]:
-            problems.append(Problem(f'ranges["{key}"]', f"found {tuple(limits)}", "give finite (low, high), low < high"))
-    if not math.isfinite(threshold):
+        exact = [_exact(limit) for limit in limits] if isinstance(limits, Sequence) or hasattr(limits, "tolist") else []
+        if key in levels:
+            problems.append(Problem(f'ranges["{key}"]', "is an input with levels", "leave it out"))
+        elif len(exact) != 2 or exact[0] is None or exact[1] is None or not exact[0] < exact[1]:
+            problems.append(Problem(f'ranges["{key}"]', f"found {limits}", "give finite (low, high), low < high"))
+        else:
+            exact_ranges[key] = str(exact[0]), str(exact[1])
+    exact_threshold = _exact(threshold)
+    if exact_threshold is None:
         problems.append(Problem("threshold", f"found {threshold}", "give a finite number in log-odds"))
+    exact_tolerance = None if tolerance is None else _exact(tolerance)
+    if tolerance is not None and (exact_tolerance is None or not exact_tolerance > 0):
+        problems.append(Problem("tolerance", f"found {tolerance}", "give a finite number above 0, or None"))
     if name_problem(name):
         problems.append(Problem("name", str(name_problem(name)), "choose another name"))
     if problems:
@@ -218,11 +230,19 @@ def seal(
     inputs = tuple(
         InputRequest(entry.name, entry.name, entry.unit, entry.levels, low, high, "fault", "fault", False)
         for entry in trained.inputs
-        for low, high in [(None, None) if entry.levels else [str(Fraction(limit)) for limit in ranges[entry.name]]]
+        for low, high in [exact_ranges.get(entry.name, (None, None))]
     )
-    decision = DecisionRequest(None, None, str(Fraction(threshold)))
-    exact_tolerance = None if tolerance is None else str(Fraction(tolerance))
-    return seal_request(trained, Request(name, arithmetic, inputs, decision, exact_tolerance), purpose)
+    decision = DecisionRequest(None, None, str(exact_threshold))
+    stated = None if exact_tolerance is None else str(exact_tolerance)
+    return seal_request(trained, Request(name, arithmetic, inputs, decision, stated), purpose)
+
+
+def _exact(number: object) -> Fraction | None:
+    """A finite number of any kind, NumPy's too, as the rational that it is; None for anything else."""
+    try:
+        return Fraction(number) if isinstance(number, (int, float, Fraction)) else Fraction(float(number))  # type: ignore[arg-type]
+    except (TypeError, ValueError, OverflowError):
+        return None
 
 
 def float_text(value: Fraction) -> str:

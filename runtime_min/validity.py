@@ -6,6 +6,7 @@ Each function returns every problem as (place, what was found, what to do).
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterator, Sequence
 
 from runtime_min.arithmetic import ROUND
@@ -70,10 +71,45 @@ def _sealed(sealed: SealedModel) -> Iterator[Found]:
 
 def _request(sealed: SealedModel) -> Iterator[Found]:
     request = sealed.about.request
+    place = "about.request"
     if request.arithmetic != sealed.arithmetic or request.model != sealed.name:
-        yield "about.request", "asks for another model or arithmetic than the one sealed", _AGAIN
-    if [entry.name for entry in request.inputs] != [entry.name for entry in sealed.inputs]:
-        yield "about.request.inputs", "are not the inputs of the model", _AGAIN
+        yield place, "asks for another model or arithmetic than the one sealed", _AGAIN
+    if [(entry.name, entry.levels) for entry in request.inputs] != [(e.name, e.levels) for e in sealed.inputs]:
+        yield f"{place}.inputs", "are not the inputs of the model", _AGAIN
+    for position, entry in enumerate(request.inputs):
+        for key in ("low", "high"):
+            text = getattr(entry, key)
+            if bool(entry.levels) != (text is None) or not _is_exact(text):
+                yield f"{place}.inputs[{position}].{key}", f"found {_shown(text)}", "expected " + (
+                    "null for an input with levels" if entry.levels else _EXACT_TEXT
+                )
+    decision = request.decision
+    given = (decision.cost_false_alarm is not None, decision.cost_miss is not None, decision.threshold is not None)
+    if given not in ((True, True, False), (False, False, True)):
+        yield f"{place}.decision", "found other than two costs or one threshold", _AGAIN
+    for key, text in (("cost_false_alarm", decision.cost_false_alarm), ("cost_miss", decision.cost_miss)):
+        if not _is_exact(text, positive=True):
+            yield f"{place}.decision.{key}", f"found {_shown(text)}", f"expected {_EXACT_TEXT}, above 0"
+    if not _is_exact(decision.threshold):
+        yield f"{place}.decision.threshold", f"found {_shown(decision.threshold)}", f"expected {_EXACT_TEXT}"
+    if not _is_exact(request.tolerance, positive=True):
+        yield f"{place}.tolerance", f"found {_shown(request.tolerance)}", f"expected {_EXACT_TEXT}, above 0"
+
+
+_EXACT_TEXT = 'a number as a text like "-95", "0.1" or "1/10"'
+_EXACT = re.compile(r"-?[0-9]{1,2000}(?:/0*[1-9][0-9]{0,2000}|(?:\.[0-9]{1,2000})?(?:[eE][+-]?[0-9]{1,3})?)")
+
+
+def _is_exact(text: str | None, positive: bool = False) -> bool:
+    """True for None and for what a Fraction reads at once; with an exponent of eight digits it would never return."""
+    if text is None:
+        return True
+    digits = re.split("[/eE]", text)[0]
+    return bool(_EXACT.fullmatch(text)) and not (positive and (text[0] == "-" or not digits.strip("0.")))
+
+
+def _shown(text: str | None) -> str:
+    return "null" if text is None else f'"{text}"' if len(text) <= 60 else f'"{text[:57]}..."'
 
 
 def device_numbers(sealed: SealedModel) -> Iterator[tuple[str, float]]:
@@ -129,19 +165,29 @@ def _trained(trained: TrainedModel) -> Iterator[Found]:
         yield "trained.class_weights", "found other than one positive sum a class", _AGAIN
     yield from _distinct("trained.inputs", [entry.name for entry in trained.inputs], "an input's name")
     yield from _distinct("trained.terms", [term.name for term in trained.terms], "a term's name")
+    for position, entry in enumerate(trained.inputs):
+        place = f"trained.inputs[{position}]"
+        if problem := name_problem(entry.name):
+            yield f"{place}.name", problem, _AGAIN
+        if len(entry.levels) == 1:
+            yield f"{place}.levels", "found one level", "expected none for a number, else two or more"
+        if entry.levels:
+            yield from _distinct(f"{place}.levels", entry.levels, "a level")
+            if entry.typical is not None and entry.typical not in range(len(entry.levels)):
+                yield f"{place}.typical", f"found {entry.typical!r}", "expected the position of a level"
+    expected = list(_expected_terms(trained))
+    found = [(term.name, term.form, term.of, term.level) for term in trained.terms]
+    if len(found) != len(expected):
+        yield "trained.terms", f"found {len(found)}", f"expected {len(expected)}, from the inputs and their levels"
+    for position, (one, other) in enumerate(zip(found, expected, strict=False)):
+        if one != other:
+            yield f"trained.terms[{position}]", f"found {_term_text(*one)}", f"expected {_term_text(*other)}"
     for position, term in enumerate(trained.terms):
         place = f"trained.terms[{position}]"
-        if len(term.of) != 1 or not 0 <= term.of[0] < len(trained.inputs):
-            yield f"{place}.of", f"found {list(term.of)}", f"expected one position below {len(trained.inputs)}"
-            continue
-        levels = trained.inputs[term.of[0]].levels
         if not term.scale > 0:
             yield f"{place}.scale", f"found {term.scale!r}", "a scale is positive"
-        if term.form == "level":
-            if term.level is None or not 1 <= term.level < len(levels):
-                yield f"{place}.level", f"found {term.level}", f"expected 1 to {len(levels) - 1}"
-        elif term.form != "value" or levels or term.level is not None:
-            yield f"{place}.form", f'found "{term.form}"', "expected value for a number, level for each level"
+        if term.form == "level" and (term.centre, term.scale) != (0.0, 1.0):
+            yield place, f"found centre {term.centre!r} and scale {term.scale!r}", "those of a level are 0 and 1"
     width = len(trained.terms)
     for k, score in enumerate(trained.scores):
         if len(score.weights) != width:
@@ -158,6 +204,22 @@ def _trained(trained: TrainedModel) -> Iterator[Found]:
             len(witness.log_odds) == len(witness.bounds) == len(trained.scores)
         ):
             yield f"trained.witness[{position}]", "found another number of inputs or log-odds", _AGAIN
+        if not all(bound >= 0 for bound in witness.bounds):
+            yield f"trained.witness[{position}].bounds", "found a negative bound", _AGAIN
+
+
+def _expected_terms(trained: TrainedModel) -> Iterator[tuple[str, str, tuple[int, ...], int | None]]:
+    """Name, form, inputs and level of each term, in the order of the inputs and of their levels."""
+    for position, entry in enumerate(trained.inputs):
+        if not entry.levels:
+            yield entry.name, "value", (position,), None
+        for level in range(1, len(entry.levels)):
+            yield f"{entry.name}={entry.levels[level]}", "level", (position,), level
+
+
+def _term_text(name: str, form: str, of: Sequence[int], level: int | None) -> str:
+    which = "" if level is None else f" {level}"
+    return f'"{name}", {form}{which} of input {", ".join(map(str, of))}'
 
 
 def _classes(place: str, classes: Sequence[str], score_count: int) -> Iterator[Found]:
