@@ -231,7 +231,7 @@ def _budget(
     bound = f"{float(budget.log_odds):.3g}"
     allowed = f"tolerance {float(Fraction(tolerance)):.3g}" if tolerance is not None else "no tolerance stated"
     checks = [_judged(name, "error budget", int(over), f"{bound} in log-odds, {allowed}")]
-    found = attack(trained, sealed, budget, seed=int(sealed.model_id, 16), thorough=thorough)
+    found = attack(trained, sealed, budget, int(sealed.model_id, 16), "thorough" if thorough else "quick")
     broken = not found.share <= 1
     sentence = f"worst error found {float(found.worst):.3g}, {found.share:.0%} of the bound, in {found.tried:,} rows"
     checks.append(_judged(name, "attack on the budget", int(broken), sentence))

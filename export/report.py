@@ -78,13 +78,13 @@ def check_lines(report: Report) -> list[str]:
         if report.release is not None:
             verdict += f": {report.release}"
         return [*lines, _line("release", verdict)]
-    verdict = []
+    counts = []
     if failed:
-        verdict.append(f"{len(failed)} of {len(report.checks)} checks failed")
+        counts.append(f"{len(failed)} of {len(report.checks)} checks failed")
     if missing:
-        verdict.append(f"{len(missing)} could not run")
+        counts.append(f"{len(missing)} could not run")
     where = "nothing was written" if report.release is None else report.release
-    return [*lines, _line("release", f"{', '.join(verdict)}: {where}")]
+    return [*lines, _line("release", f"{', '.join(counts)}: {where}")]
 
 
 def _check_line(entry: Check, accepted: tuple[str, ...]) -> str:

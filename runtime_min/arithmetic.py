@@ -12,29 +12,38 @@ from math import ldexp
 
 from runtime_min.logistic_constants import BINARY32, BINARY64
 
+TYPE_CHECKING = False  # a type checker reads it as True; MicroPython has no typing to import it from
+if TYPE_CHECKING:
+    from collections.abc import Callable
+    from typing import Any
+
+    from runtime_min.model import Exponential
+
+    Rounding = Callable[[float], float]
+
 NAN = float("nan")
 INFINITY = float("inf")
 
-CONSTANTS = {"binary32": BINARY32, "binary64": BINARY64}
+CONSTANTS: "dict[str, dict[str, Any]]" = {"binary32": BINARY32, "binary64": BINARY64}
 
 
-def round_binary64(x):  # type: ignore[no-untyped-def]
+def round_binary64(x: float) -> float:
     """Python's float is binary64: nothing to round."""
     return x
 
 
-def round_binary32(x):  # type: ignore[no-untyped-def]
+def round_binary32(x: float) -> float:
     """The binary32 number nearest to the binary64 x, ties to even; too large becomes infinity."""
     try:
-        return struct.unpack("<f", struct.pack("<f", x))[0]
+        return float(struct.unpack("<f", struct.pack("<f", x))[0])
     except OverflowError:
         return INFINITY if x > 0.0 else -INFINITY
 
 
-ROUND = {"binary64": round_binary64, "binary32": round_binary32}
+ROUND: "dict[str, Rounding]" = {"binary64": round_binary64, "binary32": round_binary32}
 
 
-def exponential(t, constants, rounded):  # type: ignore[no-untyped-def]
+def exponential(t: float, constants: "Exponential", rounded: "Rounding") -> float:
     """exp(t) for t <= 0: Cody and Waite's argument reduction, then a polynomial by Horner's rule.
 
     k = t / ln 2 rounded to an integer, ties to even; r = (t - k * ln2_high) - k * ln2_low; exp(t) = 2^k p(r).
@@ -51,7 +60,7 @@ def exponential(t, constants, rounded):  # type: ignore[no-untyped-def]
     return ldexp(p, k)
 
 
-def logistic(z, constants, rounded):  # type: ignore[no-untyped-def]
+def logistic(z: float, constants: "Exponential", rounded: "Rounding") -> float:
     """1 / (1 + exp(-z)), never from a large exponential: e = exp(-|z|); 1 / (1 + e) for z >= 0, e / (1 + e) below.
 
     The same function stands in every template on purpose: they are the things compared.
@@ -60,15 +69,15 @@ def logistic(z, constants, rounded):  # type: ignore[no-untyped-def]
     return rounded((1.0 if z >= 0.0 else e) / rounded(1.0 + e))
 
 
-def raw_bits(x, arithmetic):  # type: ignore[no-untyped-def]
+def raw_bits(x: float, arithmetic: str) -> int:
     """The bits of x as an unsigned integer; every NaN gives the quiet NaN 0x7FC00000 (0x7FF8000000000000)."""
     if arithmetic == "binary32":
-        return 0x7FC00000 if x != x else struct.unpack("<I", struct.pack("<f", x))[0]
-    return 0x7FF8000000000000 if x != x else struct.unpack("<Q", struct.pack("<d", x))[0]
+        return 0x7FC00000 if x != x else int(struct.unpack("<I", struct.pack("<f", x))[0])
+    return 0x7FF8000000000000 if x != x else int(struct.unpack("<Q", struct.pack("<d", x))[0])
 
 
-def from_bits(bits, arithmetic):  # type: ignore[no-untyped-def]
+def from_bits(bits: int, arithmetic: str) -> float:
     """The number whose bits are given."""
     if arithmetic == "binary32":
-        return struct.unpack("<f", struct.pack("<I", bits))[0]
-    return struct.unpack("<d", struct.pack("<Q", bits))[0]
+        return float(struct.unpack("<f", struct.pack("<I", bits))[0])
+    return float(struct.unpack("<d", struct.pack("<Q", bits))[0])

@@ -6,12 +6,18 @@ unit. The steps and their order are the contract; changing one changes the bits 
 
 from runtime_min.arithmetic import NAN, ROUND, logistic
 
+TYPE_CHECKING = False  # a type checker reads it as True; MicroPython has no typing to import it from
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from runtime_min.model import SealedModel
+
 FAULT = -2
 NO_CALL = -1
 
 
-def prepared(model, inputs):  # type: ignore[no-untyped-def]
-    """(0, values) after rounding, missing and range policies, or (1 + position of the first faulty input, None).
+def prepared(model: "SealedModel", inputs: "Sequence[float]") -> "tuple[int, list[float]]":
+    """(0, values) after rounding, missing and range policies, or (1 + position of the first faulty input, []).
 
     Missing is tested before the range: NaN never clamps, an infinity does.
     """
@@ -24,19 +30,19 @@ def prepared(model, inputs):  # type: ignore[no-untyped-def]
         value = rounded(float(inputs[position]))
         if value != value:
             if entry.missing != "typical":
-                return 1 + position, None
-            value = entry.typical
+                return 1 + position, []
+            value = entry.typical  # type: ignore[assignment]  # validity: it is there under "typical"
         if value < entry.low or value > entry.high:
             if entry.outside != "clamp":
-                return 1 + position, None
+                return 1 + position, []
             value = entry.low if value < entry.low else entry.high
         if entry.levels and value != int(value):
-            return 1 + position, None
+            return 1 + position, []
         values.append(value)
     return 0, values
 
 
-def scores(model, values):  # type: ignore[no-untyped-def]
+def scores(model: "SealedModel", values: "Sequence[float]") -> "list[float]":
     """Log-odds of each class after the first, from prepared values: z = b, then z + w * (x - datum) term by term."""
     rounded = ROUND[model.arithmetic]
     result = []
@@ -54,18 +60,18 @@ def scores(model, values):  # type: ignore[no-untyped-def]
     return result
 
 
-def check_inputs(model, inputs):  # type: ignore[no-untyped-def]
+def check_inputs(model: "SealedModel", inputs: "Sequence[float]") -> int:
     """0, or 1 + the position of the first input whose policy makes it a fault."""
     return prepared(model, inputs)[0]
 
 
-def log_odds(model, inputs):  # type: ignore[no-untyped-def]
+def log_odds(model: "SealedModel", inputs: "Sequence[float]") -> float:
     """Log-odds of the event (two classes); NaN on a fault."""
     fault, values = prepared(model, inputs)
     return NAN if fault else scores(model, values)[0]
 
 
-def probability(model, inputs):  # type: ignore[no-untyped-def]
+def probability(model: "SealedModel", inputs: "Sequence[float]") -> float:
     """Probability of the event (two classes); NaN on a fault."""
     fault, values = prepared(model, inputs)
     if fault:
@@ -73,7 +79,7 @@ def probability(model, inputs):  # type: ignore[no-untyped-def]
     return logistic(scores(model, values)[0], model.exponential, ROUND[model.arithmetic])
 
 
-def decide(model, inputs):  # type: ignore[no-untyped-def]
+def decide(model: "SealedModel", inputs: "Sequence[float]") -> int:
     """Class index, NO_CALL or FAULT."""
     fault, values = prepared(model, inputs)
     if fault:
