@@ -1,8 +1,9 @@
-"""Shared by all tests: the repository's root on the path of imports, and no silent skip where CI must run everything."""
+"""Shared by all tests: the root on the path of imports, a shipped example, and no silent skip where CI runs."""
 
 from __future__ import annotations
 
 import os
+import shutil
 import sys
 from pathlib import Path
 
@@ -20,3 +21,17 @@ def pytest_runtest_makereport(item: pytest.Item, call: pytest.CallInfo[None]):
         report.outcome = "failed"
         report.longrepr = f"skipped, where nothing may skip: {report.longrepr[2] if report.longrepr else ''}"
     return report
+
+
+@pytest.fixture(scope="session")
+def release(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A release of the pump example. Read it; do not write into it."""
+    from shipped import ship_example
+
+    return ship_example(tmp_path_factory.mktemp("shipped") / "release")
+
+
+@pytest.fixture
+def release_copy(release: Path, tmp_path: Path) -> Path:
+    """A copy of that release, alone in its folder, to write into."""
+    return Path(shutil.copytree(release, tmp_path / "copy"))
