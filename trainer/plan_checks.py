@@ -53,7 +53,7 @@ class Section:
             elif key not in ours:
                 near = difflib.get_close_matches(key, ours, n=1)
                 todo = f"write {near[0]} if that is meant" if near else f"the keys here are {', '.join(ours)}"
-                self.report(shortened(key), "found an unknown key", todo)
+                self.report(key if key.isprintable() else shown(key), "found an unknown key", todo)
 
     def section(self, key: str) -> Section:
         """The table under `key`; an empty one if there is none."""
@@ -64,13 +64,13 @@ class Section:
         return Section(f"{self.where}: [{key}]", value, self.problems)
 
     def text(self, key: str, default: str | None, todo: str = "write a text in quotes") -> str:
-        """A text of at least one character, all of them printable. `default` None: the key is needed."""
+        """A text of printable characters and line breaks; empty only where `default` is. `default` None: it is needed."""
         value = self.table.get(key, default)
         if value is None:
             self.report(key, "found nothing", todo)
         elif not isinstance(value, str):
             self.report(key, f"found {shown(value)}, not a text", todo)
-        elif key in self.table and not value.strip():
+        elif default != "" and not value.strip():
             self.report(key, "found an empty text", todo)
         elif not all(character.isprintable() or character == "\n" for character in value):
             self.report(key, f"found a control character in {shown(value)}", "remove it")
