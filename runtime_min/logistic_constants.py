@@ -1,4 +1,4 @@
-"""Numbers of the exponential and the logistic in binary32 and binary64, and the bounds of the probability's error.
+"""Numbers of the exponential and the logistic in binary32 and binary64, with the bounds of their errors.
 
 GENERATED: python tests/derive_logistic.py > runtime_min/logistic_constants.py
 
@@ -10,7 +10,7 @@ e / (1 + e) with e = exp(-|z|). Each number is the exact value, as the shortest 
 exponential above `floor` is a normal number.
 
 binary32: every argument tried (command: pytest tests/test_logistic_constants.py -m slow).
-exp: 1.177 ulp at most. Derived with no argument tried: (1.501, 2.773) ulp (z >= 0, z < 0).
+exp: 1.177 ulp at most. The derivation alone gives (1.501, 2.773) ulp for the logistic (z >= 0, z < 0).
 binary64: derived for every argument by tests/logistic_bounds.py. exp: 1.253 ulp at most.
 """
 

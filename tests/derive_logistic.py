@@ -70,8 +70,8 @@ def rounded(value: mpmath.mpf, digits: int) -> float:
 
 
 def largest_remainder(kind: Type) -> mpmath.mpf:
-    """R, which |r| never exceeds: |t / ln 2 - k| <= 1/2 + |t / ln 2| (2u + u^2), one u each for inv_ln2 and the product,
-    and 2^(2 - digits) more covers ln2_low and the two subtractions."""
+    """R, which |r| never exceeds: |t / ln 2 - k| <= 1/2 + |t / ln 2| (2u + u^2), one u each for inv_ln2 and its
+    product; 4u more covers ln2_low and its subtraction, which `derive` checks."""
     unit = mpmath.mpf(2) ** -kind.digits
     return mpmath.ln(2) / 2 + -kind.floor * 2.01 * unit + 4 * unit
 
@@ -91,7 +91,10 @@ def minimax(degree: int, bound: mpmath.mpf) -> list[mpmath.mpf]:
         rows = [[weights[a] * grid[a] ** j for j in range(unknowns)] + [(-1) ** i] for i, a in enumerate(at)]
         solution = mpmath.lu_solve(mpmath.matrix(rows), mpmath.matrix([wanted[a] for a in at]))
         found = [solution[j] for j in range(unknowns)]
-        errors = [w * mpmath.polyval(found[::-1], r) - v for r, w, v in zip(grid, weights, wanted, strict=True)]
+        errors = [
+            w * mpmath.fsum(c * r**j for j, c in enumerate(found)) - v
+            for r, w, v in zip(grid, weights, wanted, strict=True)
+        ]
         moved = extremes(errors, unknowns + 1)
         if moved == at:
             return found
@@ -137,7 +140,7 @@ def upwards(x: float, digits: int) -> float:
     return float(Context(prec=digits, rounding=ROUND_CEILING).plus(Decimal(x)))
 
 
-TEMPLATE = '''"""Numbers of the exponential and the logistic in binary32 and binary64, and the bounds of the probability's error.
+TEMPLATE = '''"""Numbers of the exponential and the logistic in binary32 and binary64, with the bounds of their errors.
 
 GENERATED: python tests/derive_logistic.py > runtime_min/logistic_constants.py
 
@@ -149,7 +152,7 @@ e / (1 + e) with e = exp(-|z|). Each number is the exact value, as the shortest 
 exponential above `floor` is a normal number.
 
 binary32: every argument tried (command: pytest tests/test_logistic_constants.py -m slow).
-exp: {exp32} ulp at most. Derived with no argument tried: {derived32} ulp (z >= 0, z < 0).
+exp: {exp32} ulp at most. The derivation alone gives {derived32} ulp for the logistic (z >= 0, z < 0).
 binary64: derived for every argument by tests/logistic_bounds.py. exp: {exp64} ulp at most.
 """
 

@@ -93,7 +93,8 @@ def derive(c: Constants) -> tuple[Bounds, float]:
         at_zero = (horner_error(c, low, high) + off) * SLACK
         pieces.append(Piece(low, high, at_zero, (at_zero + math.exp(high) * delta * (1 + delta)) * SLACK))
     exponential = max(p.below / ulp(math.exp(p.low) / SLACK, c.digits) for p in pieces)
-    parts = [logistic_error(c, k, p) for k in range(0, -LAST_K - c.digits, -1) for p in pieces if k < 0 or p.high <= 0.0]
+    every_k = range(0, -LAST_K - c.digits, -1)
+    parts = [logistic_error(c, k, p) for k in every_k for p in pieces if k < 0 or p.high <= 0.0]  # k = 0: r = t <= 0
     above, below, absolute = (max(column) * SLACK for column in zip(*parts, strict=True))
     absolute = max(absolute, math.exp(c.floor) * SLACK)
     return Bounds((above, below), absolute, exponential), worst_polynomial * 2.0**c.digits
