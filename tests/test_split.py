@@ -10,7 +10,10 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
+from runtime_min.canonical import canonical
 from runtime_min.errors import RowsError
 from trainer.plan import read_plan
 from trainer.split import held_out_rows, row_keys
@@ -91,3 +94,13 @@ def test_rows_that_are_all_equal_cannot_be_split() -> None:
     assert str(caught.value) == (
         "[rows]: held_out: found no two different rows to hold out one of; write held_out = 0, or give more rows"
     )
+
+
+@settings(max_examples=300, deadline=None)
+@given(st.lists(st.floats(allow_nan=False, allow_infinity=False) | st.text(max_size=5) | st.none(), min_size=1))
+def test_short_cut_to_canonical_numbers_changes_no_key(values: list[str | float | None]) -> None:
+    try:
+        expected = [f'"a",{canonical(value)},1]'.encode() for value in values]
+    except ValueError:  # a lone surrogate has no canonical form
+        return
+    assert row_keys(["a"] * len(values), [values]) == tuple(expected)

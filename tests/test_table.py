@@ -319,7 +319,7 @@ def test_endless_line_is_refused_in_bounded_memory() -> None:
 
 
 def test_hundred_thousand_rows_are_read_in_seconds(tmp_path: Path) -> None:
-    # Measured 0.8 s with writing the file, on two cores; the limit leaves room for a busy machine, and none for quadratic time.
+    # Measured 0.8 s on two cores; the limit leaves room for a busy machine, and none for quadratic time.
     lines = [f"{i % 999 / 10},{('open', 'closed')[i % 2]},{('bad', 'sound')[i % 5 == 0]}\n" for i in range(100_000)]
     start = time.monotonic()
     rows = rows_of(tmp_path, HEADER + "".join(lines))

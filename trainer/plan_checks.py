@@ -64,7 +64,7 @@ class Section:
         return Section(f"{self.where}: [{key}]", value, self.problems)
 
     def text(self, key: str, default: str | None, todo: str = "write a text in quotes") -> str:
-        """A text of printable characters and line breaks; empty only where `default` is. `default` None: it is needed."""
+        """A text of printable characters and line breaks, empty only where `default` is; None: the key is needed."""
         value = self.table.get(key, default)
         if value is None:
             self.report(key, "found nothing", todo)

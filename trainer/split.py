@@ -59,5 +59,12 @@ def held_out_rows(rows: Rows, share: Fraction, seed: int) -> npt.NDArray[np.bool
 
 
 def _json_texts(values: Sequence[str | float | None]) -> list[str]:
-    texts = {value: canonical(value) for value in set(values)}
-    return [texts[value] for value in values]
+    """`canonical` of each value, sooner: repr and RFC 8785 agree on a fraction that repr writes without an exponent."""
+    known: dict[str | float | None, str] = {}
+    texts = []
+    for value in values:
+        text = repr(value) if isinstance(value, float) else ""
+        if not text or "e" in text or text.endswith(".0"):
+            text = known.get(value, "") or known.setdefault(value, canonical(value))
+        texts.append(text)
+    return texts
