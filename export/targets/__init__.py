@@ -21,7 +21,8 @@ from runtime_min.model import SealedModel
 class Output:
     """What an artefact says of one row. Log-odds and probability are raw bits, one a class after the first.
 
-    `fault` is what check_inputs returns; every NaN counts as the same bits (`runtime_min.arithmetic.raw_bits`).
+    `fault` is what check_inputs returns, or -1 where the artefact does not say (then it is not compared); every NaN
+    counts as the same bits (`runtime_min.arithmetic.raw_bits`).
     """
 
     fault: int

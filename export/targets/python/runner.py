@@ -5,14 +5,13 @@ Rows go in and outputs come back as the bits of binary64, so that nothing is rou
 
 from __future__ import annotations
 
-import struct
 import subprocess
 import sys
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from export.targets import Output, Run
-from runtime_min.arithmetic import ROUND, raw_bits
+from runtime_min.arithmetic import ROUND, from_bits, raw_bits
 from runtime_min.model import SealedModel
 
 TIME_LIMIT = 60.0  # seconds; a row takes microseconds
@@ -71,19 +70,22 @@ def _read(what: str, sealed: SealedModel, printed: str, count: int) -> Run:
     model_id, code = first.split()
     if len(lines) != count:
         raise ValueError(f"{len(lines)} rows of {count}")
-    return Run(what, True, None, model_id, int(code), tuple(_output(line.split(), sealed.arithmetic) for line in lines))
+    outputs = tuple(_output(row, line.split(), sealed.arithmetic) for row, line in enumerate(lines))
+    return Run(what, True, None, model_id, int(code), outputs)
 
 
-def _output(fields: list[str], arithmetic: str) -> Output:
+def _output(row: int, fields: list[str], arithmetic: str) -> Output:
     fault, log_odds, probability, decision = fields
-    return Output(int(fault), (_of(log_odds, arithmetic),), (_of(probability, arithmetic),), int(decision))
+    bits = [_bits_of(text, arithmetic, row) for text in (log_odds, probability)]
+    return Output(int(fault), (bits[0],), (bits[1],), int(decision))
 
 
-def _of(text: str, arithmetic: str) -> int:
-    """The bits in the arithmetic; where the number is none of it, a pattern longer than any of its numbers."""
-    bits = int(text, 16)
-    (x,) = struct.unpack("<d", struct.pack("<Q", bits))
-    return raw_bits(x, arithmetic) if x != x or ROUND[arithmetic](x) == x else 1 << 64 | bits
+def _bits_of(text: str, arithmetic: str, row: int) -> int:
+    """The bits in the arithmetic of a number given by those in binary64, which must be the same number."""
+    x = from_bits(int(text, 16), "binary64")
+    if x == x and ROUND[arithmetic](x) != x:
+        raise ValueError(f"row {row + 1}: {x!r} is not a {arithmetic} number")
+    return raw_bits(x, arithmetic)
 
 
 def _bits64(x: float) -> int:

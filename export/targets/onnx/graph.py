@@ -1,0 +1,50 @@
+"""A graph under construction: named nodes and constants in the order in which they are added."""
+
+from __future__ import annotations
+
+import struct
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from onnx import GraphProto, NodeProto, TensorProto, helper
+
+FORMATS = {TensorProto.FLOAT: "f", TensorProto.DOUBLE: "d", TensorProto.INT64: "q"}
+
+
+@dataclass
+class Graph:
+    """Nodes and constants so far. `real` is the element type of the arithmetic: FLOAT or DOUBLE."""
+
+    real: int
+    nodes: list[NodeProto] = field(default_factory=list)
+    constants: dict[str, TensorProto] = field(default_factory=dict)
+
+    def node(self, name: str, operator: str, *inputs: str, **attributes: Any) -> str:
+        """Add an operator with one output, called like the node; returns that name."""
+        self.nodes.append(helper.make_node(operator, inputs, [name], name=name, **attributes))
+        return name
+
+    def number(self, name: str, value: float) -> str:
+        """A scalar of the arithmetic."""
+        return self._constant(name, self.real, (), [value])
+
+    def numbers(self, name: str, values: Sequence[float]) -> str:
+        """A vector of the arithmetic."""
+        return self._constant(name, self.real, (len(values),), values)
+
+    def integer(self, name: str, value: int) -> str:
+        """An int64 scalar."""
+        return self._constant(name, TensorProto.INT64, (), [value])
+
+    def proto(self, name: str, inputs: Sequence[Any], outputs: Sequence[Any], text: str) -> GraphProto:
+        """The finished graph."""
+        return helper.make_graph(
+            self.nodes, name, inputs, outputs, initializer=list(self.constants.values()), doc_string=text
+        )
+
+    def _constant(self, name: str, kind: int, shape: tuple[int, ...], values: Sequence[float]) -> str:
+        # Raw little-endian bytes, so that the bits are those of the sealed model.
+        raw = struct.pack(f"<{len(values)}{FORMATS[kind]}", *values)
+        self.constants[name] = helper.make_tensor(name, kind, shape, raw, raw=True)
+        return name

@@ -1,0 +1,102 @@
+"""Runs the graph in ONNX Runtime, in a process of its own: a damaged graph can stop that, and no more.
+
+Each way of running is judged on all rows; in each, a batch of none and a batch of one must work too.
+"""
+
+from __future__ import annotations
+
+import importlib.util
+import json
+import subprocess
+import sys
+from collections.abc import Iterator, Sequence
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from export.targets import Output, Run
+from runtime_min.arithmetic import raw_bits
+from runtime_min.model import SealedModel
+
+TIME_LIMIT = 120.0  # seconds, of all ways together
+ELEMENT = {"binary32": "<f4", "binary64": "<f8"}
+DOES_NOT_SAY = -1  # Output.fault: the graph has no check_inputs
+
+
+@dataclass(frozen=True)
+class Way:
+    """One session: optimisation level by its name in ONNX Runtime, threads, all rows at once or one at a time."""
+
+    what: str
+    level: str
+    threads: int = 1
+    one_at_a_time: bool = False
+
+
+QUICK = (
+    Way("optimisation off", "ORT_DISABLE_ALL"),
+    Way("optimisation on", "ORT_ENABLE_ALL"),
+)
+THOROUGH = (
+    *QUICK,
+    Way("optimisation basic", "ORT_ENABLE_BASIC"),
+    Way("optimisation extended", "ORT_ENABLE_EXTENDED"),
+    Way("optimisation on, 2 threads", "ORT_ENABLE_ALL", threads=2),
+    Way("optimisation off, one row at a time", "ORT_DISABLE_ALL", one_at_a_time=True),
+    Way("optimisation on, one row at a time", "ORT_ENABLE_ALL", one_at_a_time=True),
+)
+
+
+def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], thorough: bool) -> Iterator[Run]:
+    """Every row through the graph, once a way. Output.fault is -1: the graph does not say which input is at fault."""
+    if importlib.util.find_spec("onnxruntime") is None:
+        yield Run("ONNX Runtime", False, "ONNX Runtime is not installed: pip install onnxruntime", None, None, ())
+        return
+    element = ELEMENT[sealed.arithmetic]
+    with np.errstate(over="ignore"):
+        table = np.array(rows, dtype=element).reshape(len(rows), len(sealed.inputs))
+    ways = THOROUGH if thorough else QUICK
+    asked = {
+        "path": sys.path,
+        "model": str(artefact),
+        "element": element,
+        "shape": table.shape,
+        "rows": table.tobytes().hex(),
+        "ways": [asdict(way) for way in ways],
+    }
+    command = [sys.executable, "-I", "-B", str(Path(__file__).with_name("session.py"))]
+    trouble = "ended without a result"
+    try:
+        done = subprocess.run(command, input=json.dumps(asked), capture_output=True, text=True, timeout=TIME_LIMIT)
+        printed = done.stdout.splitlines()
+        trouble = (done.stderr.strip().splitlines() or [f"ended with status {done.returncode}"])[-1]
+    except subprocess.TimeoutExpired as late:
+        printed = (late.stdout or b"").decode(errors="replace").splitlines() if isinstance(late.stdout, bytes) else []
+        trouble = f"did not end within {TIME_LIMIT:g} s"
+    for position, way in enumerate(ways):
+        what = f"ONNX Runtime, {way.what}"
+        if position >= len(printed):
+            yield Run(what, True, trouble, None, None, ())
+            return
+        yield _read(what, sealed, json.loads(printed[position]), len(rows))
+
+
+def _read(what: str, sealed: SealedModel, said: dict[str, Any], count: int) -> Run:
+    what = f"{what}, {said['version']}"
+    if said["trouble"] is not None:
+        return Run(what, True, said["trouble"], said["model_id"], None, ())
+    element = ELEMENT[sealed.arithmetic]
+    log_odds, probability = (np.frombuffer(bytes.fromhex(said[name]), element) for name in ("log_odds", "probability"))
+    decision = np.frombuffer(bytes.fromhex(said["decision"]), "<i8")
+    outputs = tuple(
+        Output(
+            DOES_NOT_SAY,
+            (raw_bits(float(log_odds[row]), sealed.arithmetic),),
+            (raw_bits(float(probability[row]), sealed.arithmetic),),
+            int(decision[row]),
+        )
+        for row in range(count)
+    )
+    return Run(what, True, None, said["model_id"], None, outputs)
