@@ -2,7 +2,7 @@
 
 _HOMES = {"write_release": "release", "check_release": "check"}
 
-__all__ = sorted(_HOMES)  # noqa: PLE0604
+__all__ = sorted(_HOMES)
 
 
 def __getattr__(name: str) -> object:

@@ -141,7 +141,8 @@ def _read_manifest(into: Path) -> dict[str, Any]:
     wrong += [f"write: {name}" for name in manifest["write"] if name not in TARGETS] if not wrong else []
     wrong += [f"files: {name}" for name in manifest["files"] if Path(name).name != name] if not wrong else []
     if "/" in str(manifest.get("model")) or wrong:
-        raise ReleaseError(Problem(str(path), "is damaged at " + ", ".join(wrong or ["model"]), "copy the release again"))
+        damage = "is damaged at " + ", ".join(wrong or ["model"])
+        raise ReleaseError(Problem(str(path), damage, "copy the release again"))
     return manifest
 
 

@@ -20,7 +20,6 @@ if TYPE_CHECKING:
     from export.check import Check
     from runtime_min.model import SealedModel, TrainedModel
     from trainer.plan import Plan
-    from trainer.table import Rows
 
 CAUTION = "A statistical classifier is not a safety function."
 
@@ -90,7 +89,7 @@ def _ship(request: argparse.Namespace) -> int:
 
     with _progress() as progress:
         progress("reading the plan")
-        plan, rows, trained, sealed = _fitted(request.plan, progress)
+        plan, trained, sealed = _fitted(request.plan, progress)
         from export.release import write_release
 
         if not request.json:
@@ -115,7 +114,7 @@ def _fit(request: argparse.Namespace) -> int:
     from runtime_min.codec import sealed_text, trained_text
 
     with _progress() as progress:
-        plan, _, trained, sealed = _fitted(request.plan, progress)
+        plan, trained, sealed = _fitted(request.plan, progress)
     into = request.into or plan.path.parent
     written = {
         f"{plan.model}.trained.json": trained_text(trained).encode(),
@@ -157,7 +156,7 @@ def _score(request: argparse.Namespace) -> int:
     return 0
 
 
-def _fitted(path: Path, progress: Callable[[str], None]) -> tuple[Plan, Rows, TrainedModel, SealedModel]:
+def _fitted(path: Path, progress: Callable[[str], None]) -> tuple[Plan, TrainedModel, SealedModel]:
     from runtime_min.sealing import seal_request
     from trainer.fit import fit_plan
     from trainer.plan import read_plan
@@ -169,7 +168,7 @@ def _fitted(path: Path, progress: Callable[[str], None]) -> tuple[Plan, Rows, Tr
     rows = read_rows(plan)
     progress("fitting")
     trained = fit_plan(plan, rows)
-    return plan, rows, trained, seal_request(trained, request_of(plan, rows), plan.purpose, plan.sha256)
+    return plan, trained, seal_request(trained, request_of(plan, rows), plan.purpose, plan.sha256)
 
 
 def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
@@ -179,12 +178,10 @@ def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
 
     source = Source(plan.rows.file, plan.rows.label, plan.rows.held_out, plan.rows.seed)
     found = recheck_fit(trained, sealed.about.request, source)
-    sentence = "; ".join(found.problems)
-    if not found.problems:
-        sentence = f"{found.rows:,} raw rows give the same centres, scales and optimum (within {found.step:.1e} posterior sd)"
-    return Check(
-        f"{plan.model}.trained.json", "optimality from raw rows", True, not found.problems, len(found.problems), sentence
-    )
+    held = f"{found.rows:,} raw rows give these centres, scales and optimum (within {found.step:.1e} posterior sd)"
+    sentence = "; ".join(found.problems) or held
+    name, wrong = f"{plan.model}.trained.json", len(found.problems)
+    return Check(name, "optimality from raw rows", True, not wrong, wrong, sentence)
 
 
 def _unchecked(request: argparse.Namespace) -> tuple[str, ...]:

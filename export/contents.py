@@ -1,4 +1,4 @@
-"""What a release holds: every file that follows from the sealed and the trained model, as bytes. Nothing is written here."""
+"""What a release holds: every file that follows from the sealed and the trained model, as bytes; nothing is written."""
 
 from __future__ import annotations
 

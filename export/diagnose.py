@@ -58,9 +58,9 @@ def _cause(
     sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Output], wrong: Sequence[int]
 ) -> str:
     parts = {part for row in wrong for part in _parts(vectors[row].expected, outputs[row])}
-    faulted = [row for row in wrong if (vectors[row].expected.decision == score.FAULT) != (outputs[row].decision == score.FAULT)]
-    if faulted:
-        return _range_cause(sealed, vectors[faulted[0]], outputs[faulted[0]])
+    for row in wrong:
+        if (vectors[row].expected.decision == score.FAULT) != (outputs[row].decision == score.FAULT):
+            return _range_cause(sealed, vectors[row], outputs[row])
     if parts == {"fault"}:
         return "the position of the faulty input is reported wrongly"
     if parts == {"decision"}:
@@ -85,8 +85,8 @@ def _range_cause(sealed: SealedModel, vector: Vector, have: Output) -> str:
             if not entry.low < value < entry.high
         ]
         position = edge[0] if edge else 0
-    entry = sealed.inputs[position]
-    return f'look at how input "{entry.name}" = {vector.inputs[position]!r} is held against {entry.low!r} to {entry.high!r}'
+    entry, value = sealed.inputs[position], vector.inputs[position]
+    return f'look at how input "{entry.name}" = {value!r} is held against {entry.low!r} to {entry.high!r}'
 
 
 def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Output]) -> str:

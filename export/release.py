@@ -18,6 +18,7 @@ from export.vectors import make_vectors
 from runtime_min.errors import Problem, ReleaseError
 from runtime_min.model import SealedModel, TrainedModel
 
+
 def write_release(
     sealed: SealedModel,
     trained: TrainedModel,

@@ -114,8 +114,8 @@ def _next_to_threshold(sealed: SealedModel, rng: random.Random) -> Iterator[Row]
     exact: list[Row] = []
     numeric = [position for position, entry in enumerate(sealed.inputs) if not entry.levels]
     limits = {sealed.decision.low, sealed.decision.high}
-    for attempt in range(ON_THRESHOLD_TRIES):
-        if len(found) >= THRESHOLD_ROWS and len(exact) >= THRESHOLD_ROWS // 4 or not numeric:
+    for _ in range(ON_THRESHOLD_TRIES):
+        if (len(found) >= THRESHOLD_ROWS and len(exact) >= THRESHOLD_ROWS // 4) or not numeric:
             break
         threshold = rng.choice(sorted(limits))
         pair = _bracket(sealed, list(random_row(sealed, rng)), rng.choice(numeric), threshold)
@@ -153,7 +153,7 @@ def _bracket(sealed: SealedModel, row: list[float], position: int, threshold: fl
 
 
 def _policy_rows(sealed: SealedModel, rng: random.Random) -> Iterator[Row]:
-    """For every input: missing, infinite, on and one step beyond each limit, halves of a level; then several at once."""
+    """For every input: missing, infinite, on and one step beyond each limit, no level; then several at once."""
     kind = sealed.arithmetic
     for position, entry in enumerate(sealed.inputs):
         odd = [math.nan, math.inf, -math.inf, entry.low, entry.high, -0.0]
