@@ -7,6 +7,7 @@ in one go. Loading never runs code from the file.
 
 from __future__ import annotations
 
+import functools
 import hashlib
 import json
 import math
@@ -114,6 +115,11 @@ def _no_constant(name: str) -> Any:
     raise ValueError(f"{name} is not a JSON number")
 
 
+@functools.cache
+def _hints(kind: type) -> dict[str, Any]:
+    return typing.get_type_hints(kind)
+
+
 def _decode(kind: type, value: Any, place: str, where: str) -> Any:
     problems: list[Problem] = []
 
@@ -133,7 +139,7 @@ def _decode(kind: type, value: Any, place: str, where: str) -> Any:
         if is_dataclass(kind):
             if not isinstance(value, dict):
                 return wrong(place, value, "an object")
-            hints = typing.get_type_hints(kind)
+            hints = _hints(typing.cast(type, kind))
             names = [field.name for field in fields(kind)]
             for key in value:
                 if key not in names:

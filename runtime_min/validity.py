@@ -10,7 +10,7 @@ import re
 from collections.abc import Iterator, Sequence
 
 from runtime_min.arithmetic import ROUND
-from runtime_min.model import ARITHMETICS, Input, SealedModel, TrainedModel
+from runtime_min.model import ARITHMETICS, Input, InputRequest, SealedModel, TrainedModel
 from runtime_min.names import name_problem
 
 Found = tuple[str, str, str]
@@ -66,6 +66,8 @@ def _sealed(sealed: SealedModel) -> Iterator[Found]:
     for place, number in device_numbers(sealed):
         if rounded(number) != number or math.copysign(1.0, number) < 0 == number:
             yield place, f"found {number!r}", f"expected a {sealed.arithmetic} number"
+    yield from _digest("about.rows_sha256", sealed.about.rows_sha256)
+    yield from _digest("about.plan_sha256", sealed.about.plan_sha256)
     yield from _request(sealed)
 
 
@@ -74,7 +76,7 @@ def _request(sealed: SealedModel) -> Iterator[Found]:
     place = "about.request"
     if request.arithmetic != sealed.arithmetic or request.model != sealed.name:
         yield place, "asks for another model or arithmetic than the one sealed", _AGAIN
-    if [(entry.name, entry.levels) for entry in request.inputs] != [(e.name, e.levels) for e in sealed.inputs]:
+    if _policies(request.inputs) != _policies(sealed.inputs):
         yield f"{place}.inputs", "are not the inputs of the model", _AGAIN
     for position, entry in enumerate(request.inputs):
         for key in ("low", "high"):
@@ -94,6 +96,10 @@ def _request(sealed: SealedModel) -> Iterator[Found]:
         yield f"{place}.decision.threshold", f"found {_shown(decision.threshold)}", f"expected {_EXACT_TEXT}"
     if not _is_exact(request.tolerance, positive=True):
         yield f"{place}.tolerance", f"found {_shown(request.tolerance)}", f"expected {_EXACT_TEXT}, above 0"
+
+
+def _policies(inputs: Sequence[Input] | Sequence[InputRequest]) -> list[tuple[str, str, tuple[str, ...], str, str]]:
+    return [(entry.name, entry.unit, entry.levels, entry.outside, entry.missing) for entry in inputs]
 
 
 _EXACT_TEXT = 'a number as a text like "-95", "0.1" or "1/10"'
@@ -199,6 +205,7 @@ def _trained(trained: TrainedModel) -> Iterator[Found]:
     side = len(trained.scores) * (1 + width)
     if len(trained.covariance) != side or any(len(row) != side for row in trained.covariance):
         yield "trained.covariance", "found another shape", f"expected {side} rows of {side}"
+    yield from _shares_and_sizes(trained)
     for position, witness in enumerate(trained.witness):
         if len(witness.inputs) != len(trained.inputs) or not (
             len(witness.log_odds) == len(witness.bounds) == len(trained.scores)
@@ -220,6 +227,23 @@ def _expected_terms(trained: TrainedModel) -> Iterator[tuple[str, str, tuple[int
 def _term_text(name: str, form: str, of: Sequence[int], level: int | None) -> str:
     which = "" if level is None else f" {level}"
     return f'"{name}", {form}{which} of input {", ".join(map(str, of))}'
+
+
+def _shares_and_sizes(trained: TrainedModel) -> Iterator[Found]:
+    sizes = {f"certificate.{key}": value for key, value in vars(trained.certificate).items()}
+    sizes |= {f"rows.{key}": value for key, value in vars(trained.rows).items() if key != "sha256"}
+    held_out = {} if trained.held_out is None else vars(trained.held_out)
+    sizes |= {f"held_out.{key}": value for key, value in held_out.items() if value is not None}
+    shares = ("brier", "auc", "base_rate", "base_brier")
+    for key, value in sizes.items():
+        if not value >= 0 or (key.rpartition(".")[2] in shares and not value <= 1):
+            yield f"trained.{key}", f"found {value!r}", "expected 0 or more, and of a share 1 or less"
+    yield from _digest("trained.rows.sha256", trained.rows.sha256)
+
+
+def _digest(place: str, digest: str | None) -> Iterator[Found]:
+    if digest is not None and not re.fullmatch("[0-9a-f]{64}", digest):
+        yield place, f"found {_shown(digest)}", "expected a SHA-256 in 64 hexadecimal digits"
 
 
 def _classes(place: str, classes: Sequence[str], score_count: int) -> Iterator[Found]:

@@ -1,0 +1,510 @@
+"""Files: canonical JSON against RFC 8785, round trips, the schemas, and every kind of damage refused in one sentence.
+
+Sources: `check_values/facts/json.json` (RFC 8785 appendix B and sections 3.2.2, 3.2.3; RFC 8259 section 6),
+`check_values/facts/sha256.json` (FIPS 180-4), JSON Schema draft 2020-12 by the package jsonschema. The damages are
+constructions.
+"""
+
+from __future__ import annotations
+
+import copy
+import dataclasses
+import hashlib
+import json
+import struct
+import types
+import typing
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any
+
+import jsonschema
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from models import sample_sealed_models
+
+from runtime_min.canonical import canonical
+from runtime_min.codec import load, load_trained, model_id, sealed_text, trained_text
+from runtime_min.errors import FileError
+from runtime_min.model import SealedModel, TrainedModel
+
+FACTS = Path(__file__).parent / "check_values" / "facts"
+JSON_FACTS = json.loads((FACTS / "json.json").read_text(encoding="utf-8"))
+SCHEMAS = {
+    kind: json.loads((Path(__file__).parent.parent / "runtime_min" / f"{kind}.schema.json").read_text(encoding="utf-8"))
+    for kind in ("sealed", "trained")
+}
+SAMPLES = sample_sealed_models()
+TRAINED, SEALED = SAMPLES["pump_binary32"]
+SEALED_DATA = json.loads(sealed_text(SEALED))
+TRAINED_DATA = json.loads(trained_text(TRAINED))
+
+
+# --- canonical JSON --------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("case", JSON_FACTS["canonical_numbers"], ids=lambda case: case["bits"])
+def test_number_is_written_as_rfc_8785_writes_it(case: dict[str, str]) -> None:
+    (number,) = struct.unpack(">d", bytes.fromhex(case["bits"]))
+    assert canonical(number) == case["json"]
+
+
+@pytest.mark.parametrize("bits", JSON_FACTS["not_allowed_bits"])
+def test_number_that_is_not_finite_is_refused(bits: str) -> None:
+    (number,) = struct.unpack(">d", bytes.fromhex(bits))
+    with pytest.raises(ValueError, match="JSON has no form"):
+        canonical(number)
+
+
+def test_sample_of_rfc_8785_is_written_to_the_byte() -> None:
+    text = canonical(json.loads(JSON_FACTS["sample_input"]))
+    assert text == JSON_FACTS["sample_canonical"]
+    assert text.encode().hex() == JSON_FACTS["sample_canonical_utf8_hex"]
+
+
+def test_keys_are_sorted_by_their_utf16_units() -> None:
+    keys = JSON_FACTS["key_order"]
+    assert list(json.loads(canonical(dict.fromkeys(reversed(keys), 0)))) == keys
+
+
+def test_minus_zero_and_large_integers_follow_the_exact_rules() -> None:
+    assert (
+        canonical([-0.0, 2**53, 2**53 + 1, -(2**53) - 1])
+        == '[0,9007199254740992,"9007199254740993","-9007199254740993"]'
+    )
+
+
+@pytest.mark.parametrize("value", ["\ud800", {"\udfff": 1}, object()], ids=["text", "key", "object"])
+def test_what_json_cannot_say_is_refused(value: object) -> None:
+    with pytest.raises(ValueError, match=r"JSON has no form|surrogates not allowed"):
+        canonical(value)
+
+
+@given(st.floats(allow_nan=False, allow_infinity=False))
+def test_every_number_reads_back_to_its_bits(number: float) -> None:
+    assert struct.pack("<d", float(json.loads(canonical(number)))) == struct.pack("<d", number + 0.0)
+
+
+@given(
+    st.recursive(
+        st.none() | st.booleans() | st.integers(-(2**53), 2**53) | st.text(),
+        lambda inner: st.lists(inner) | st.dictionaries(st.text(), inner),
+    )
+)
+def test_canonical_text_reads_back_to_its_value_and_is_a_fixed_point(value: object) -> None:
+    text = canonical(value)
+    assert json.loads(text) == value
+    assert canonical(json.loads(text)) == text
+
+
+# --- round trips -----------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_models_read_back_from_their_files(name: str, tmp_path: Path) -> None:
+    trained, sealed = SAMPLES[name]
+    (tmp_path / "sealed.json").write_text(sealed_text(sealed), encoding="utf-8")
+    (tmp_path / "trained.json").write_text(trained_text(trained), encoding="utf-8")
+    assert load(tmp_path / "sealed.json") == sealed
+    assert load_trained(tmp_path / "trained.json") == trained
+    assert load(tmp_path / "sealed.json").model_id == sealed.model_id
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_model_id_is_the_sha256_of_the_model_part_of_the_file(name: str) -> None:
+    for known in json.loads((FACTS / "sha256.json").read_text())["values"]:
+        assert hashlib.sha256(known["text"].encode()).hexdigest() == known["sha256"]
+    _, sealed = SAMPLES[name]
+    text = sealed_text(sealed)
+    # The keys are sorted, so `model` stands last and its text is what is hashed.
+    assert text.startswith('{"about":{')
+    part = text[text.rindex(',"model":{') + len(',"model":') : -len("}\n")]
+    assert hashlib.sha256(part.encode()).hexdigest()[:16] == sealed.model_id
+
+
+def test_model_id_changes_with_every_field_but_about() -> None:
+    other = dataclasses.replace(SEALED, about=dataclasses.replace(SEALED.about, purpose="another", tool="another"))
+    assert model_id(other) == model_id(SEALED)
+    for field in dataclasses.fields(SEALED):
+        if field.name != "about":
+            assert model_id(dataclasses.replace(SEALED, **{field.name: None})) != model_id(SEALED)
+
+
+# --- schemas ---------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("kind", SCHEMAS)
+def test_schema_is_a_valid_draft_2020_12_schema(kind: str) -> None:
+    assert SCHEMAS[kind]["$schema"] == "https://json-schema.org/draft/2020-12/schema"
+    jsonschema.Draft202012Validator.check_schema(SCHEMAS[kind])
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_schemas_accept_the_files_of_valid_models(name: str) -> None:
+    trained, sealed = SAMPLES[name]
+    jsonschema.Draft202012Validator(SCHEMAS["sealed"]).validate(json.loads(sealed_text(sealed)))
+    jsonschema.Draft202012Validator(SCHEMAS["trained"]).validate(json.loads(trained_text(trained)))
+
+
+def test_schemas_ask_for_every_field_of_the_data_classes_and_no_other() -> None:
+    for kind, root in (("sealed", SealedModel), ("trained", TrainedModel)):
+        for shape, place in _objects(SCHEMAS[kind]):
+            assert shape["required"] == list(shape["properties"]), place
+            assert shape["additionalProperties"] is False, place
+        wanted = {frozenset(field.name for field in dataclasses.fields(found)) for found in _classes_below(root)}
+        described = {frozenset(shape["required"]) for shape, _ in _objects(SCHEMAS[kind])}
+        parts = {"format", "model", "about"} if kind == "sealed" else {"format", "trained"}
+        if kind == "sealed":
+            wanted = {fields - {"about"} for fields in wanted}
+        assert described == wanted | {frozenset(parts)}
+
+
+def _objects(schema: Any, place: str = "") -> Iterator[tuple[dict[str, Any], str]]:
+    if isinstance(schema, dict):
+        if schema.get("type") == "object":
+            yield schema, place
+        for key, value in schema.items():
+            yield from _objects(value, f"{place}/{key}")
+    elif isinstance(schema, list):
+        for position, value in enumerate(schema):
+            yield from _objects(value, f"{place}/{position}")
+
+
+def _classes_below(kind: Any) -> set[type]:
+    if dataclasses.is_dataclass(kind):
+        below = [_classes_below(hint) for hint in typing.get_type_hints(kind).values()]
+        return set().union({typing.cast(type, kind)}, *below)
+    if isinstance(kind, types.UnionType) or typing.get_origin(kind) is tuple:
+        return set().union(*(_classes_below(inner) for inner in typing.get_args(kind)))
+    return set()
+
+
+# --- damage ----------------------------------------------------------------------------------------------------------
+
+
+def problems_of(folder: Path, kind: str, content: str | bytes) -> list[str]:
+    """Every sentence with which a file is refused, without its path; none if it is accepted."""
+    path = folder / f"{kind}.json"
+    path.write_bytes(content if isinstance(content, bytes) else content.encode("utf-8", "surrogatepass"))
+    try:
+        load(path) if kind == "sealed" else load_trained(path)
+    except FileError as error:
+        return [str(problem).removeprefix(f"{path}: ") for problem in error.problems]
+    return []
+
+
+AGAIN = "take the file from the release again"
+SEAL_AGAIN = "take the file from the release again, or seal the trained model again"
+
+WHOLE_FILES = {
+    "empty": ("", "is not JSON (Expecting value: line 1 column 1 (char 0)); " + AGAIN),
+    "cut off": (sealed_text(SEALED)[:-3], None),
+    "not UTF-8": (b'{"format": "\xff"}', None),
+    "deep": ("[" * 100_000, None),
+    "NaN": (
+        sealed_text(SEALED).replace('"low":', '"low":NaN,"x":', 1),
+        "is not JSON (NaN is not a JSON number); " + AGAIN,
+    ),
+    "twin keys": (
+        sealed_text(SEALED).replace('"low":', '"low":0,"low":', 1),
+        "is not JSON (the key 'low' stands twice in one object); " + AGAIN,
+    ),
+    "a list": ("[]", 'format: found "list"; name a file whose format is "firmlogit sealed model 1"'),
+    "trained": (
+        trained_text(TRAINED),
+        'format: found "firmlogit trained model 1"; name a file whose format is "firmlogit sealed model 1"',
+    ),
+    "a part too many": (
+        canonical({**SEALED_DATA, "extra": 1}),
+        "found the keys about, extra, format, model; expected format, model, about",
+    ),
+}
+
+
+@pytest.mark.parametrize("name", WHOLE_FILES)
+def test_file_that_is_no_sealed_model_is_refused(name: str, tmp_path: Path) -> None:
+    content, sentence = WHOLE_FILES[name]
+    found = problems_of(tmp_path, "sealed", content)
+    assert len(found) == 1
+    assert found[0] == sentence if sentence else found[0].startswith("is not JSON (")
+
+
+def test_missing_file_is_named(tmp_path: Path) -> None:
+    with pytest.raises(FileError) as caught:
+        load(tmp_path / "nowhere.json")
+    path = tmp_path / "nowhere.json"
+    assert str(caught.value) == f"{path}: cannot be read (No such file or directory); name an existing file"
+
+
+@pytest.mark.parametrize("text", JSON_FACTS["invalid_numbers"])
+def test_number_outside_the_grammar_is_refused(text: str, tmp_path: Path) -> None:
+    damaged = sealed_text(SEALED).replace('"floor":' + canonical(SEALED.exponential.floor), f'"floor":{text}')
+    assert damaged != sealed_text(SEALED)
+    assert problems_of(tmp_path, "sealed", damaged)[0].startswith("is not JSON (")
+
+
+Path_ = tuple[str | int, ...]
+REMOVED = object()
+
+# (what is put there, whether the schema can see it, the sentence)
+SEALED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
+    "missing key": (("model", "name"), REMOVED, True, f"model.name: is missing; {AGAIN}"),
+    "unknown key": (("model", "color"), 1, True, f"model.color: found 1, expected no such key; {AGAIN}"),
+    "text for a number": (
+        ("model", "intercepts", 0),
+        "1",
+        True,
+        f'model.intercepts[0]: found "1", expected a number; {AGAIN}',
+    ),
+    "true for a number": (
+        ("model", "intercepts", 0),
+        True,
+        True,
+        f"model.intercepts[0]: found true, expected a number; {AGAIN}",
+    ),
+    "number for a list": (("model", "intercepts"), 1, True, f"model.intercepts: found 1, expected a list; {AGAIN}"),
+    "list for an object": (("model", "decision"), [], True, f"model.decision: found [], expected an object; {AGAIN}"),
+    "null for a text": (("about", "purpose"), None, True, f"model.about.purpose: found null, expected a text; {AGAIN}"),
+    "fraction for an integer": (
+        ("model", "terms", 0, "of", 0),
+        0.5,
+        True,
+        f"model.terms[0].of[0]: found 0.5, expected an integer; {AGAIN}",
+    ),
+    "number too large": (
+        ("model", "intercepts", 0),
+        10**400,
+        False,
+        f"model.intercepts[0]: found {str(10**400)[:57]}..., expected a finite number; {AGAIN}",
+    ),
+    "lone surrogate": (
+        ("model", "classes", 0),
+        "\ud800",
+        False,
+        f'model.classes[0]: found "\\ud800", expected a text without lone surrogates; {AGAIN}',
+    ),
+    "another arithmetic": (
+        ("model", "arithmetic"),
+        "int16",
+        True,
+        'model.arithmetic: found "int16"; this version knows binary64, binary32',
+    ),
+    "a number that is no binary32": (
+        ("model", "intercepts", 0),
+        0.1,
+        False,
+        "model.intercepts[0]: found 0.1; expected a binary32 number",
+    ),
+    "a name that is no identifier": (
+        ("model", "inputs", 0, "name"),
+        "Flow",
+        True,
+        f'model.inputs[0].name: found "Flow", which is not an identifier of lower-case letters; {SEAL_AGAIN}',
+    ),
+    "a keyword for a name": (
+        ("model", "inputs", 0, "name"),
+        "while",
+        False,
+        f'model.inputs[0].name: found "while", a keyword of Python and C and C++; {SEAL_AGAIN}',
+    ),
+    "three classes": (("model", "classes"), ["a", "b", "c"], True, "model.classes: found 3; this version takes two"),
+    "one class twice": (("model", "classes"), ["a", "a"], True, 'model.classes: found "a" twice; a class stands once'),
+    "policy of no kind": (
+        ("model", "inputs", 0, "outside"),
+        "wrap",
+        True,
+        'model.inputs[0].outside: found "wrap"; expected fault or clamp',
+    ),
+    "typical without a value": (
+        ("model", "inputs", 3, "typical"),
+        None,
+        True,
+        f"model.inputs[3].typical: does not fit the policy for a missing value; {SEAL_AGAIN}",
+    ),
+    "term of no input": (
+        ("model", "terms", 0, "of", 0),
+        9,
+        False,
+        "model.terms[0].of: found [9]; expected one position below",
+    ),
+    "weight too many": (
+        ("model", "terms", 0, "weights", 0),
+        [1, 1],
+        True,
+        "model.terms[0].weights: found another shape; expected 1 rows of 1",
+    ),
+    "thresholds crossed": (
+        ("model", "decision", "low"),
+        100,
+        False,
+        f"model.decision: found low above high; {SEAL_AGAIN}",
+    ),
+    "another polynomial": (
+        ("model", "exponential", "coefficients", 1),
+        2,
+        True,
+        f"model.exponential.coefficients: found others than 1, 1, …; {SEAL_AGAIN}",
+    ),
+    "a limit with a long exponent": (
+        ("about", "request", "inputs", 0, "low"),
+        "1e30000000",
+        True,
+        'about.request.inputs[0].low: found "1e30000000"; expected a number as a text like "-95", "0.1" or "1/10"',
+    ),
+    "a cost of zero": (
+        ("about", "request", "decision", "cost_miss"),
+        "0/7",
+        True,
+        'about.request.decision.cost_miss: found "0/7"; expected a number as a text like "-95", "0.1" or "1/10", above',
+    ),
+    "no decision": (
+        ("about", "request", "decision", "cost_miss"),
+        None,
+        True,
+        f"about.request.decision: found other than two costs or one threshold; {SEAL_AGAIN}",
+    ),
+    "digest cut short": (
+        ("about", "rows_sha256"),
+        "abc",
+        True,
+        'about.rows_sha256: found "abc"; expected a SHA-256 in 64 hexadecimal digits',
+    ),
+}
+
+TRAINED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
+    "scale of zero": (
+        ("trained", "terms", 0, "scale"),
+        0,
+        True,
+        "trained.terms[0].scale: found 0.0; a scale is positive",
+    ),
+    "terms out of order": (
+        ("trained", "terms", 0, "of", 0),
+        1,
+        False,
+        'trained.terms[0]: found "{0}", value of input 1; expected "{0}", value of input 0',
+    ),
+    "sd of zero": (
+        ("trained", "prior", "sds", 0),
+        0,
+        True,
+        "trained.prior: found an sd that is not positive; a prior sd is positive, or null where it is flat",
+    ),
+    "negative bound": (
+        ("trained", "witness", 0, "bounds", 0),
+        -1,
+        True,
+        f"trained.witness[0].bounds: found a negative bound; {SEAL_AGAIN}",
+    ),
+    "weight missing": (
+        ("trained", "scores", 0, "weights"),
+        [1.0],
+        False,
+        "trained.scores[0].weights: found 1 weights; expected",
+    ),
+    "share above one": (
+        ("trained", "held_out", "auc"),
+        1.5,
+        True,
+        "trained.held_out.auc: found 1.5; expected 0 or more, and of a share 1 or less",
+    ),
+    "class without weight": (
+        ("trained", "class_weights", 0),
+        0,
+        True,
+        f"trained.class_weights: found other than one positive sum a class; {SEAL_AGAIN}",
+    ),
+    "covariance of another shape": (
+        ("trained", "covariance", 0),
+        [1],
+        False,
+        "trained.covariance: found another shape; expected",
+    ),
+}
+
+
+def damaged(data: Any, place: Path_, value: Any) -> Any:
+    result = copy.deepcopy(data)
+    inner = result
+    for step in place[:-1]:
+        inner = inner[step]
+    if value is REMOVED:
+        del inner[place[-1]]
+    else:
+        inner[place[-1]] = value
+    return result
+
+
+@pytest.mark.parametrize(
+    ("kind", "name"), [("sealed", name) for name in SEALED_DAMAGE] + [("trained", name) for name in TRAINED_DAMAGE]
+)
+def test_damaged_model_is_refused_with_its_place(kind: str, name: str, tmp_path: Path) -> None:
+    place, value, seen, sentence = (SEALED_DAMAGE if kind == "sealed" else TRAINED_DAMAGE)[name]
+    data = damaged(SEALED_DATA if kind == "sealed" else TRAINED_DATA, place, value)
+    found = problems_of(tmp_path, kind, json.dumps(data))
+    sentence = sentence.replace("{0}", TRAINED.terms[0].name)
+    assert any(entry.startswith(sentence) for entry in found), found
+    assert jsonschema.Draft202012Validator(SCHEMAS[kind]).is_valid(data) is not seen
+
+
+def test_minus_zero_is_refused_in_a_sealed_file(tmp_path: Path) -> None:
+    data = damaged(SEALED_DATA, ("model", "intercepts", 0), -0.0)
+    found = problems_of(tmp_path, "sealed", json.dumps(data))
+    assert found == ["model.intercepts[0]: found -0.0; expected a binary32 number"]
+
+
+def test_every_problem_is_named_at_once(tmp_path: Path) -> None:
+    data = damaged(damaged(SEALED_DATA, ("model", "intercepts", 0), "1"), ("model", "classes", 1), 3)
+    assert len(problems_of(tmp_path, "sealed", json.dumps(data))) == 2
+    data = damaged(damaged(SEALED_DATA, ("model", "intercepts", 0), 0.1), ("model", "decision", "low"), 100)
+    assert len(problems_of(tmp_path, "sealed", json.dumps(data))) == 2
+
+
+def _leaves(data: Any, place: Path_ = ()) -> Iterator[Path_]:
+    if place:
+        yield place
+    items = data.items() if isinstance(data, dict) else enumerate(data) if isinstance(data, list) else ()
+    for key, value in items:
+        yield from _leaves(value, (*place, key))
+
+
+REPLACEMENTS: list[Callable[[Any], Any]] = [
+    lambda value: REMOVED,
+    lambda value: None,
+    lambda value: True,
+    lambda value: "Ω",
+    lambda value: -3,
+    lambda value: 0.3,
+    lambda value: [],
+    lambda value: {},
+    lambda value: [value, value],
+    lambda value: -value if _is_number(value) else value,
+]
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool)
+
+
+@pytest.mark.parametrize("kind", SCHEMAS)
+def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(kind: str, tmp_path: Path) -> None:
+    """Every place of a small file, put out of order in ten ways."""
+    trained, sealed = SAMPLES["lenient_binary32"]
+    small = dataclasses.replace(trained, witness=trained.witness[:1], held_out=TRAINED.held_out)
+    data = json.loads(sealed_text(sealed) if kind == "sealed" else trained_text(small))
+    validator = jsonschema.Draft202012Validator(SCHEMAS[kind])
+    refused = 0
+    for place in _leaves(data):
+        if place[:2] == ("trained", "covariance") and place[2:3] > (0,):
+            continue  # alike, row by row
+        inner = data
+        for step in place:
+            inner = inner[step]
+        for replacement in REPLACEMENTS:
+            other = damaged(data, place, replacement(inner))
+            found = problems_of(tmp_path, kind, json.dumps(other))
+            if not validator.is_valid(other):
+                refused += 1
+                assert found, (place, replacement(inner))
+    assert refused > 500
