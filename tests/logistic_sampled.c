@@ -4,8 +4,8 @@
  *
  * COUNT arguments |z|, both signs of each, each operation rounded once to binary64. Reference: the C library's expl in
  * a type of at least 64 bits, so each figure is good to about 2^-9 ulp. A quarter of the arguments each: uniform in
- * [0, 8]; uniform down to the floor; any exponent from 2^-60 up; within 64 neighbours of a multiple of (ln 2) / 2, where
- * k changes or the result nears a power of two. An ulp is that of the larger of exact and computed value.
+ * [0, 8]; uniform down to the floor; any exponent from 2^-60 up; within 64 neighbours of a multiple of (ln 2) / 2,
+ * where k changes or the result nears a power of two. An ulp is that of the larger of exact and computed value.
  *
  * Prints one line: worst ulps for z >= 0, for z < 0 and of the exponential, worst absolute error; then their arguments.
  *
