@@ -1,0 +1,80 @@
+"""Sealed model -> the C header. Derives no model number; decides only which parts a model needs."""
+
+from __future__ import annotations
+
+import math
+
+from export.targets import SelfTest, Vector
+from export.targets.c import lexical
+from export.targets.c.template import fill
+from export.vectors import next_to
+from runtime_min.model import SealedModel, Term
+
+SMALLEST_NORMAL = {"binary32": 2.0**-126, "binary64": 2.0**-1022}
+SMALLEST = {"binary32": 2.0**-149, "binary64": 2.0**-1074}
+
+
+def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
+    """The header `NAME.h`, ASCII.
+
+    Raises ReleaseError where two inputs would have the same name in C, or the model's name is none.
+    """
+    kind = sealed.arithmetic
+    names = lexical.input_names(sealed)
+    clamped = [entry.outside == "clamp" for entry in sealed.inputs]
+    typical = [entry.typical is not None for entry in sealed.inputs]
+    datum = [term.datum is not None for term in sealed.terms]
+    return fill(
+        "header.h.jinja",
+        sealed,
+        guard=f"{sealed.name.upper()}_H",
+        names=names,
+        width=max(len(f"{sealed.name}_IN_{name},") for name in names),
+        rules=[_rules(sealed.name.upper(), *flags) for flags in zip(clamped, typical, datum, strict=True)],
+        clamped=clamped,
+        typical=typical,
+        datum=datum,
+        low=[lexical.number(entry.low, kind) for entry in sealed.inputs],
+        high=[lexical.number(entry.high, kind) for entry in sealed.inputs],
+        typicals=[lexical.number(entry.typical or 0.0, kind) for entry in sealed.inputs],
+        datums=[lexical.number(term.datum or 0.0, kind) for term in sealed.terms],
+        levels=[str(len(entry.levels)) for entry in sealed.inputs],
+        weights=[lexical.number(weight, kind) for term in sealed.terms for weight in term.weights[0]],
+        weight_names=[
+            f"{names[term.of[0]]}: {level}" if level else names[term.of[0]]
+            for term in sealed.terms
+            for level in sealed.inputs[term.of[0]].levels or ("",)
+        ],
+        table=lambda cells, labels=names: lexical.table(cells, labels),
+        levels_in_words=lambda entry: ", ".join(f"{rank} {level}" for rank, level in enumerate(entry.levels)),
+        subnormal=[names[term.of[0]] for term in sealed.terms if can_be_subnormal(sealed, term)],
+        crc=f"0x{self_test.crc:08X}UL",
+        tests=[vector_words(vector, kind) for vector in self_test.vectors],
+        answers=[(vector.expected.fault, vector.expected.decision) for vector in self_test.vectors],
+    )
+
+
+def vector_words(vector: Vector, kind: str) -> str:
+    """Inputs, log-odds and probability of one row as words of bits, in that order, separated by commas."""
+    parts = [lexical.words(value, kind) for value in vector.inputs]
+    parts += [lexical.words_of_bits(bits, kind) for bits in (*vector.expected.log_odds, *vector.expected.probability)]
+    return ", ".join(word for part in parts for word in part)
+
+
+def can_be_subnormal(sealed: SealedModel, term: Term) -> bool:
+    """Whether some reading within the limits makes a product w (x - datum), not 0, below the smallest normal number."""
+    if term.form != "value" or term.weights[0][0] == 0:
+        return False
+    kind = sealed.arithmetic
+    low, high = sealed.inputs[term.of[0]].low, sealed.inputs[term.of[0]].high
+    datum = term.datum or 0.0
+    if low < datum < high:
+        nearest = min(datum - next_to(datum, -math.inf, kind), next_to(datum, math.inf, kind) - datum)
+    else:
+        nearest = min(abs(limit - datum) or SMALLEST[kind] for limit in (low, high))
+    return abs(term.weights[0][0]) * nearest < SMALLEST_NORMAL[kind]
+
+
+def _rules(name: str, clamped: bool, typical: bool, datum: bool) -> str:
+    flags = [f"{name}_{flag}" for flag, on in (("CLAMP", clamped), ("TYPICAL", typical), ("DATUM", datum)) if on]
+    return " | ".join(flags) or "0"
