@@ -25,11 +25,13 @@ there shows here.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from decimal import ROUND_CEILING, Context, Decimal
 from fractions import Fraction
 from typing import NamedTuple
 
+from export.exact import slopes, trained_log_odds
 from export.interval import (
     ZERO,
     Interval,
@@ -44,7 +46,7 @@ from runtime_min.arithmetic import ROUND
 from runtime_min.errors import Problem, SealError
 from runtime_min.model import Input, SealedModel, Term, TrainedModel, in_range
 from runtime_min.score import scores
-from runtime_min.sealing import threshold_of
+from runtime_min.sealing import FORMATS, datum_of, seal_request, threshold_of
 
 PROBABILITY_ERROR = {
     "binary32": Fraction(logistic_constants.BINARY32_PROBABILITY_ERROR),
@@ -93,32 +95,6 @@ class Misses(NamedTuple):
     rows: tuple[int, ...]
     compared: int
     largest: float
-
-
-def trained_log_odds(trained: TrainedModel, inputs: Sequence[Fraction]) -> tuple[Fraction, ...]:
-    """T(X), one number a class after the first. inputs: one number an input; levels: 0, 1, … K - 1."""
-    values = [
-        inputs[term.of[0]] if term.level is None else Fraction(inputs[term.of[0]] == term.level)
-        for term in trained.terms
-    ]
-    columns = [
-        (value - Fraction(term.centre)) / Fraction(term.scale)
-        for value, term in zip(values, trained.terms, strict=True)
-    ]
-    return tuple(
-        Fraction(score.intercept)
-        + sum((Fraction(w) * column for w, column in zip(score.weights, columns, strict=True)), ZERO)
-        for score in trained.scores
-    )
-
-
-def slopes(trained: TrainedModel, k: int, position: int, levels: int) -> tuple[Fraction, ...]:
-    """The trained weight of one input per unit, for class k + 1: one number, or one a level (0 for the reference)."""
-    weights = [ZERO] * (levels or 1)
-    for term, weight in zip(trained.terms, trained.scores[k].weights, strict=True):
-        if term.of == (position,):
-            weights[term.level or 0] += Fraction(weight) / Fraction(term.scale)
-    return tuple(weights)
 
 
 def datums(sealed: SealedModel) -> tuple[Fraction, ...]:
@@ -244,6 +220,58 @@ def _outward(interval: Interval) -> tuple[float, float]:
         low if Fraction(low) <= interval.low else math.nextafter(low, -math.inf),
         high if Fraction(high) >= interval.high else math.nextafter(high, math.inf),
     )
+
+
+def advise(trained: TrainedModel, sealed: SealedModel, budget: Budget, tolerance: Fraction) -> Problem:
+    """Why a budget is larger than the tolerance, and what would fit: another arithmetic, an origin, a tolerance."""
+    costliest = max(budget.items, key=lambda item: item.bound)
+    found = (
+        f"{_text(budget.log_odds)} in log-odds is more than the tolerance {_text(tolerance)}, and the costliest item "
+        f"is {costliest.what}, {_text(costliest.bound)}"
+    )
+    options = [*_other_arithmetics(trained, sealed, tolerance), *_origins(sealed, budget, tolerance)]
+    options.append(f"raise the tolerance to {_text(budget.log_odds)}")
+    return Problem("error budget", found, ", or ".join(options))
+
+
+def _other_arithmetics(trained: TrainedModel, sealed: SealedModel, tolerance: Fraction) -> Iterator[str]:
+    request = sealed.about.request
+    for arithmetic in FORMATS:
+        if arithmetic == sealed.arithmetic:
+            continue
+        try:
+            bound = derive(trained, seal_request(trained, replace(request, arithmetic=arithmetic))).log_odds
+        except SealError:
+            continue
+        if bound <= tolerance:
+            yield f"choose {arithmetic} (its bound is {_text(bound)})"
+
+
+def _origins(sealed: SealedModel, budget: Budget, tolerance: Fraction) -> Iterator[str]:
+    """Constants that the device could subtract before a value becomes a float, so that its rounding costs less."""
+    total, chosen = budget.log_odds, []
+    inputs = {entry.name: entry for entry in sealed.inputs}
+    for item in sorted(budget.items, key=lambda item: -item.bound):
+        if total <= tolerance or item.kind != "input" or item.input is None:
+            continue
+        entry = inputs[item.input]
+        origin = datum_of(Fraction(entry.low), Fraction(entry.high))
+        if origin is None:
+            continue
+        near = replace(entry, low=float(entry.low - origin), high=float(entry.high - origin))
+        share = input_rounding(sealed.arithmetic, near) / input_rounding(sealed.arithmetic, entry)
+        total -= item.bound * (1 - share)
+        unit = f" {entry.unit}" if entry.unit else ""
+        chosen.append(f'{float(origin):g}{unit} from "{entry.name}"')
+    if chosen and total <= tolerance:
+        constants, bound = " and ".join(chosen), _text(total)
+        yield f"have the device subtract {constants} before the value becomes a float (the bound is then {bound})"
+
+
+def _text(value: Fraction) -> str:
+    """Three digits, rounded up."""
+    context = Context(prec=3, rounding=ROUND_CEILING)
+    return f"{float(context.divide(Decimal(value.numerator), Decimal(value.denominator))):.3g}"
 
 
 def witness_misses(trained: TrainedModel, sealed: SealedModel, budget: Budget) -> Misses:
