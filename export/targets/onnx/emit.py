@@ -32,7 +32,7 @@ CAUTION = (
 
 def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     """The serialised model. A graph cannot test itself: `self_test` is not used."""
-    return model(sealed).SerializeToString(deterministic=True)
+    return bytes(model(sealed).SerializeToString(deterministic=True))
 
 
 def model(sealed: SealedModel) -> ModelProto:

@@ -9,7 +9,7 @@ from typing import Any
 
 from onnx import GraphProto, NodeProto, TensorProto, helper
 
-FORMATS = {TensorProto.FLOAT: "f", TensorProto.DOUBLE: "d", TensorProto.INT64: "q"}
+FORMATS: dict[int, str] = {TensorProto.FLOAT: "f", TensorProto.DOUBLE: "d", TensorProto.INT64: "q"}
 
 
 @dataclass

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
@@ -76,25 +75,35 @@ def _parts(sealed: SealedModel) -> dict[str, Any]:
         ],
         "counts": sorted({1, 2, len(names), len(with_datum), len(products)} - {0}),
         "coefficients": [f"C{degree}" for degree in range(len(sealed.exponential.coefficients))],
-        "tables": list(_tables(sealed)),
+        "tables": _tables(sealed),
     }
 
 
-def _tables(sealed: SealedModel) -> Iterator[str]:
-    """The module's name for each device number, in the order of `validity.device_numbers`, which is that of the CRC."""
-    for key in ("low", "high", "typical"):
-        for entry in sealed.inputs:
-            if getattr(entry, key) is not None:
-                yield lexical.constant(key.upper(), entry.name)
-    yield "INTERCEPT"
+def _tables(sealed: SealedModel) -> list[str]:
+    """Every device number as tuples of the module's names, in the order of `validity.device_numbers`, the CRC's."""
+    scalars = [
+        lexical.constant(key.upper(), entry.name)
+        for key in ("low", "high", "typical")
+        for entry in sealed.inputs
+        if getattr(entry, key) is not None
+    ]
+    scalars.append("INTERCEPT")
     steps = list(zip(sealed.inputs, sealed.terms, strict=True))
+    scalars += [lexical.constant("DATUM", entry.name) for entry, term in steps if term.datum is not None]
+    tuples = []
     for entry, term in steps:
-        if term.datum is not None:
-            yield lexical.constant("DATUM", entry.name)
-    for entry, term in steps:
-        yield lexical.constant("*WEIGHTS" if term.form == "level" else "WEIGHT", entry.name)
-    yield "*THRESHOLDS"
-    yield from ("INV_LN2", "LN2_FIRST", "LN2_REST", "EXP_FLOOR", "*EXP_COEFFICIENTS")
+        if term.form == "level":
+            tuples += [*_tuples(scalars), lexical.constant("WEIGHTS", entry.name)]
+            scalars = []
+        else:
+            scalars.append(lexical.constant("WEIGHT", entry.name))
+    exponential = ["INV_LN2", "LN2_FIRST", "LN2_REST", "EXP_FLOOR"]
+    return [*tuples, *_tuples(scalars), "THRESHOLDS", *_tuples(exponential), "EXP_COEFFICIENTS"]
+
+
+def _tuples(names: list[str]) -> list[str]:
+    """One tuple of these names; of no names, none."""
+    return [f"({lexical.listed(names)}{',' if len(names) == 1 else ''})"] if names else []
 
 
 def _largest_sum(sealed: SealedModel) -> Fraction:
