@@ -73,7 +73,7 @@ def round_to(arithmetic: str, value: Fraction) -> float:
     unit = max(exponent - digits + 1, lowest)
     units = round(magnitude / Fraction(2) ** unit)
     if units.bit_length() + unit > limit:
-        return math.copysign(math.inf, value)
+        return math.inf if value > 0 else -math.inf
     return math.copysign(math.ldexp(units, unit), value) if units else 0.0
 
 
@@ -239,6 +239,8 @@ def seal(
 
 def _exact(number: object) -> Fraction | None:
     """A finite number of any kind, NumPy's too, as the rational that it is; None for anything else."""
+    if isinstance(number, (str, bytes)):
+        return None
     try:
         return Fraction(number) if isinstance(number, (int, float, Fraction)) else Fraction(float(number))  # type: ignore[arg-type]
     except (TypeError, ValueError, OverflowError):
@@ -248,7 +250,8 @@ def _exact(number: object) -> Fraction | None:
 def float_text(value: Fraction) -> str:
     """`value` to six digits, for a message; works beyond the range of a float."""
     context = Context(prec=6, Emax=10**9, Emin=-(10**9))
-    return f"{context.divide(Decimal(value.numerator), Decimal(value.denominator)):g}"
+    quotient = context.divide(Decimal(value.numerator), Decimal(value.denominator))
+    return f"{quotient.normalize(context) if abs(quotient.adjusted()) > 5 else quotient:g}"
 
 
 def _same_inputs(trained: TrainedModel, request: Request) -> None:
@@ -275,11 +278,12 @@ def _device_input(
     if entry.levels:
         low, high = 0.0, len(entry.levels) - 1.0
     else:
+        told = len(problems)
         low = device(f"{place}: range", Fraction(str(entry.low)))
         high = device(f"{place}: range", Fraction(str(entry.high)))
-        if not low < high:
+        if not low < high and len(problems) == told:
             found = f"the range {entry.low} to {entry.high} has no width once rounded"
             problems.append(Problem(place, found, "widen the range, or choose binary64"))
-        elif stand_in is not None:
+        if stand_in is not None:
             stand_in = min(max(stand_in, low), high)
     return Input(entry.name, entry.unit, entry.levels, low, high, entry.outside, entry.missing, stand_in)
