@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from fractions import Fraction
 
 import numpy as np
 import numpy.typing as npt
@@ -16,6 +17,8 @@ import numpy.typing as npt
 from runtime_min.model import TrainedInput
 
 Floats = npt.NDArray[np.float64]
+
+_SUMMABLE = 2.0**900  # of numbers up to this no sum overflows, in any order
 
 
 @dataclass(frozen=True)
@@ -61,10 +64,9 @@ def typical_value(values: Floats, level_count: int) -> float | None:
         return None
     if level_count:
         return float(np.bincount(present.astype(np.int64), minlength=level_count).argmax())
-    # Divided by a power of two first: a sum of 2^1023s would be too large, and the division costs no bit but in
-    # numbers below 2^-900, where nothing is measured.
-    halvings = int(len(present) - 1).bit_length() if float(np.abs(present).max()) > 2.0**900 else 0
-    return math.ldexp(math.fsum(np.ldexp(present, -halvings)) / len(present), halvings)
+    if float(np.abs(present).max()) > _SUMMABLE:
+        return float(sum(map(Fraction, present.tolist())) / len(present))
+    return math.fsum(present) / len(present)
 
 
 def with_typical(values: Floats, typical: Sequence[float | None]) -> Floats:

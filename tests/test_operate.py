@@ -1,0 +1,82 @@
+"""Held-out results against published examples, scikit-learn, and extremes worked by hand.
+
+Sources: `check_values/facts/brier_1950.json`, `check_values/facts/hanley_mcneil_1982.json`; scikit-learn's log_loss,
+brier_score_loss and roc_auc_score.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from fractions import Fraction
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from sklearn.metrics import brier_score_loss, log_loss, roc_auc_score
+
+from trainer.operate import area_under_roc, held_out_results
+
+FACTS = Path(__file__).parent / "check_values" / "facts"
+
+
+def fact(name: str) -> dict[str, Any]:
+    data: dict[str, Any] = json.loads((FACTS / f"{name}.json").read_text(encoding="utf-8"))
+    return data
+
+
+def test_brier_score_of_the_ten_rain_forecasts_of_1950() -> None:
+    record = fact("brier_1950")
+    forecast = np.array([float(text) for text in record["forecast"]])
+    with np.errstate(divide="ignore"):
+        log_odds = np.log(forecast) - np.log1p(-forecast)
+    found = held_out_results(log_odds, np.array(record["observed"]), 0.3)
+    # A forecast of 0 has log-odds -inf; the two logarithms and exp err by some units in the last place.
+    assert found.brier == pytest.approx(float(record["expected"]["brier_half"]), rel=1e-14)
+
+
+def test_area_under_the_curve_of_the_rated_images_of_1982_is_exact() -> None:
+    record = fact("hanley_mcneil_1982")
+    ratings = np.repeat(record["ratings"] * 2, record["normal"] + record["abnormal"]).astype(float)
+    labels = np.repeat([0, 1], [sum(record["normal"]), sum(record["abnormal"])])
+    auc = area_under_roc(ratings, labels)
+    assert auc == float(Fraction(record["expected"]["auc"]))
+    assert f"{auc:.3f}" == record["expected"]["auc_published"]
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_results_agree_with_scikit_learn(seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    log_odds = np.round(rng.normal(0, 2, 300), 1)  # rounded: many ties
+    labels = (rng.random(300) < 1 / (1 + np.exp(-log_odds))).astype(int)
+    share = 1 / (1 + np.exp(-log_odds))
+    base = np.full(300, 0.3)
+    found = held_out_results(log_odds, labels, 0.3)
+    assert (found.rows, found.events, found.base_rate) == (300, int(labels.sum()), 0.3)
+    assert found.log_loss == pytest.approx(log_loss(labels, share), rel=1e-12)
+    assert found.brier == pytest.approx(brier_score_loss(labels, share), rel=1e-12)
+    assert found.auc == pytest.approx(roc_auc_score(labels, share), rel=1e-12)
+    assert found.base_log_loss == pytest.approx(log_loss(labels, base), rel=1e-12)
+    assert found.base_brier == pytest.approx(brier_score_loss(labels, base), rel=1e-12)
+
+
+def test_order_of_the_rows_changes_no_bit() -> None:
+    rng = np.random.default_rng(9)
+    log_odds, labels = rng.normal(0, 3, 500), rng.integers(0, 2, 500)
+    first = held_out_results(log_odds, labels, 0.4)
+    for _ in range(20):
+        order = rng.permutation(500)
+        assert held_out_results(log_odds[order], labels[order], 0.4) == first
+
+
+def test_far_log_odds_lose_nothing() -> None:
+    """log(1 + exp(800)) is 800 to the last bit, and log(1 + exp(-800)) is below the smallest number."""
+    found = held_out_results(np.array([800.0, 800.0]), np.array([0, 1]), 0.5)
+    assert (found.log_loss, found.brier, found.auc) == (400.0, 0.5, 0.5)
+    assert (found.base_log_loss, found.base_brier) == (math.log(2), 0.25)
+
+
+@pytest.mark.parametrize("label", [0, 1])
+def test_one_class_has_no_area_under_the_curve(label: int) -> None:
+    assert held_out_results(np.array([0.5, -1.0]), np.array([label, label]), 0.25).auc is None
