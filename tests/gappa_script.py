@@ -55,15 +55,14 @@ def script(trained: TrainedModel, sealed: SealedModel) -> str:
             definitions += [f"x{j} = rnd(X{j});"]
             u, value, real_value, exact_value = _dyadic(device[0]), f"x{j}", f"X{j}", f"x{j}"
             if datum:
-                # Gappa sees that x - c is exact only where c is a positive constant.
-                less = f"{'-' if datum > 0 else '+'} {_dyadic(abs(datum))}"
+                less = f"- {_dyadic(datum)}"
                 definitions += [f"d{j} rnd= x{j} {less};", f"D{j} = X{j} {less};"]
                 value, real_value, exact_value = f"d{j}", f"D{j}", f"(x{j} {less})"
             definitions += [f"p{j} rnd= {u} * {value};", f"P{j} = W{j} * {real_value};"]
             # Gappa's own way to split u d - W D has second-order terms, which cost about 1e-7 of the bound.
             parts = [f"({u} - W{j}) * {exact_value}", f"W{j} * (x{j} - X{j})"]
             parts += [f"{u} * (d{j} - {exact_value})"] if datum else []
-            hints += [f"{u} * {value} - {f'W{j} * {real_value}'} -> {' + '.join(parts)};"]
+            hints += [f"{u} * {value} - W{j} * {real_value} -> {' + '.join(parts)};"]
             addend, real_addend = f"p{j}", f"P{j}"
         definitions += [f"z{j} rnd= {computed} + {addend};", f"Z{j} = {meant} + {real_addend};"]
         computed, meant = f"z{j}", f"Z{j}"

@@ -1,0 +1,163 @@
+"""The attack on the budget: it finds the worst input where that is known, and it finds planted mistakes."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+from fractions import Fraction
+
+import numpy as np
+import pytest
+from line_models import line
+from models import IMPELLER, make_request, make_trained, sample_sealed_models
+
+from export.attack import attack
+from export.budget import derive
+from export.exact import trained_log_odds
+from runtime_min import score
+from runtime_min.model import SealedModel, TrainedModel
+from runtime_min.sealing import round_to, seal_request
+
+SAMPLES = sample_sealed_models()
+Pair = tuple[TrainedModel, SealedModel]
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_attack_stays_within_the_budget_and_comes_near_it(name: str) -> None:
+    trained, sealed = SAMPLES[name]
+    found = attack(trained, sealed, derive(trained, sealed), seed=1)
+    assert found.share <= 1
+    # Models of levels alone have a handful of inputs, all tried; the others can be brought near their bound.
+    assert found.share >= 0.65 or not any(term.form == "value" for term in sealed.terms)
+
+
+@pytest.mark.parametrize("name", ["pump_binary32", "pump_binary64", "tiny_binary32", "levels_only_binary32"])
+def test_reported_error_is_that_of_the_reported_inputs(name: str) -> None:
+    trained, sealed = SAMPLES[name]
+    budget = derive(trained, sealed)
+    found = attack(trained, sealed, budget, seed=1)
+    assert tuple(round_to(sealed.arithmetic, real) for real in found.reals) == found.inputs
+    device = Fraction(score.log_odds(sealed, found.inputs))
+    assert found.worst == abs(device - trained_log_odds(trained, found.reals)[0])
+    assert found.share == float(found.worst / budget.log_odds)
+
+
+def test_attack_finds_the_worst_of_all_inputs_of_a_narrow_range() -> None:
+    trained, sealed = line("1", "1.0002", weight=1.375, scale=0.7, centre=0.1, intercept=-1.5)
+    worst = Fraction(0)
+    x = np.float32(sealed.inputs[0].low)
+    while x <= sealed.inputs[0].high:
+        value = Fraction(float(x))
+        for towards in (-np.inf, np.inf):
+            gap = Fraction(float(np.nextafter(x, np.float32(towards)))) - value
+            real = value + gap * Fraction(499_999, 1_000_000)
+            device = Fraction(score.log_odds(sealed, [float(x)]))
+            worst = max(worst, abs(device - trained_log_odds(trained, [real])[0]))
+        x = np.nextafter(x, np.float32(np.inf))
+    assert attack(trained, sealed, derive(trained, sealed), seed=3).worst >= worst
+
+
+def test_same_seed_gives_the_same_result_and_another_seed_another_search() -> None:
+    trained, sealed = SAMPLES["pump_binary32"]
+    budget = derive(trained, sealed)
+    first, again, other = (attack(trained, sealed, budget, seed) for seed in (7, 7, 8))
+    assert first == again
+    assert other.inputs != first.inputs
+
+
+def test_thorough_attack_tries_more() -> None:
+    trained, sealed = SAMPLES["plain_binary32"]
+    budget = derive(trained, sealed)
+    quick, thorough = (attack(trained, sealed, budget, 1, thorough) for thorough in (False, True))
+    assert thorough.tried > 5 * quick.tried
+    assert thorough.share >= quick.share * 0.999
+
+
+# --- planted mistakes -------------------------------------------------------------------------------------------------
+
+
+def weights_off() -> Pair:
+    # 1 + 63 * 2^-30 rounds to 1, by almost half a unit.
+    return line("0", "15.99", weight=1 + 63 * 2.0**-30)
+
+
+def far_datum() -> Pair:
+    """A datum far outside the range, as no sealing would choose it: the subtraction loses nearly all bits."""
+    trained, sealed = line("1", "1.9", intercept=-1000.0)
+    return trained, replace(sealed, terms=(replace(sealed.terms[0], datum=1000.0),), intercepts=(0.0,))
+
+
+def level_weights_off() -> Pair:
+    trained = make_trained([IMPELLER], 3)
+    weights = (3 + 2.0**-24, 17 + 3 * 2.0**-22)
+    trained = replace(trained, scores=(replace(trained.scores[0], intercept=0.0, weights=weights),))
+    return trained, seal_request(trained, make_request([IMPELLER]))
+
+
+DOMINATED = {
+    "intercept": lambda: line("-1", "2", intercept=2.0**20 + 31 / 1024),
+    "input": lambda: line("-10", "11"),
+    "weight": weights_off,
+    "weight of a level": level_weights_off,
+    "datum": far_datum,
+    "product": lambda: line("-10", "11", weight=1.3333334 // 2.0**-23 * 2.0**-23),
+    "sum": lambda: line("-1", "2", intercept=1000.0),
+}
+
+
+@pytest.mark.parametrize("kind", DOMINATED)
+def test_attack_breaks_a_budget_that_leaves_out_one_kind_of_item(kind: str) -> None:
+    trained, sealed = DOMINATED[kind]()
+    budget = derive(trained, sealed)
+    left = tuple(item for item in budget.items if item.kind != kind.split()[0])
+    assert len(left) < len(budget.items)
+    short = replace(budget, items=left, log_odds=sum((item.bound for item in left), Fraction(0)))
+    assert attack(trained, sealed, budget, seed=1).share <= 1
+    assert attack(trained, sealed, short, seed=1).share > 1
+
+
+def last_bit(sealed: SealedModel) -> SealedModel:
+    weight = float(np.nextafter(np.float32(sealed.terms[0].weights[0][0]), np.float32(np.inf)))
+    return replace(sealed, terms=(replace(sealed.terms[0], weights=((weight,),)), *sealed.terms[1:]))
+
+
+def swapped(sealed: SealedModel) -> SealedModel:
+    first, second, *rest = sealed.terms
+    terms = (replace(first, weights=second.weights), replace(second, weights=first.weights), *rest)
+    return replace(sealed, terms=terms)
+
+
+def without_datum(sealed: SealedModel) -> SealedModel:
+    at = next(position for position, term in enumerate(sealed.terms) if term.datum is not None)
+    terms = tuple(replace(term, datum=None) if position == at else term for position, term in enumerate(sealed.terms))
+    return replace(sealed, terms=terms)
+
+
+def negated_intercept(sealed: SealedModel) -> SealedModel:
+    return replace(sealed, intercepts=(-sealed.intercepts[0],))
+
+
+def shifted_level(sealed: SealedModel) -> SealedModel:
+    *rest, last = sealed.terms
+    weights = last.weights[0]
+    return replace(sealed, terms=(*rest, replace(last, weights=((*weights[1:], weights[0]),))))
+
+
+@pytest.mark.parametrize(
+    ("mistake", "name"),
+    [
+        # In many inputs the last bit of one weight hides behind the rounding of the others.
+        (last_bit, "one_input_binary32"),
+        (swapped, "pump_binary32"),
+        (without_datum, "pump_binary32"),
+        (negated_intercept, "pump_binary32"),
+        (shifted_level, "pump_binary32"),
+    ],
+)
+def test_attack_finds_a_mistake_in_the_sealed_model_under_the_right_budget(
+    mistake: Callable[[SealedModel], SealedModel], name: str
+) -> None:
+    trained, sealed = SAMPLES[name]
+    budget = derive(trained, sealed)
+    assert attack(trained, sealed, budget, seed=2).share <= 1
+    assert attack(trained, mistake(sealed), budget, seed=2).share > 1

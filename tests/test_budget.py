@@ -1,0 +1,428 @@
+"""The error budget: derived by hand for small models, never exceeded by any of many real inputs, and what it says."""
+
+from __future__ import annotations
+
+import itertools
+import math
+import time
+from dataclasses import replace
+from fractions import Fraction
+
+import mpmath
+import numpy as np
+import pytest
+from hypothesis import assume, given, settings
+from hypothesis import strategies as st
+from line_models import line
+from models import (
+    CURRENT,
+    FLOW,
+    IMPELLER,
+    SUCTION,
+    WATER,
+    Quantity,
+    make_request,
+    make_trained,
+    sample_sealed_models,
+)
+
+from export.budget import Budget, advise, derive, witness_misses
+from export.exact import trained_log_odds
+from export.interval import (
+    Interval,
+    difference_rounding,
+    half_unit,
+    product_rounding,
+    rounding,
+    sum_rounding,
+)
+from runtime_min import score
+from runtime_min.errors import SealError
+from runtime_min.model import DecisionRequest, SealedModel, TrainedModel, Witness
+from runtime_min.sealing import fold, round_to, seal_request
+
+SAMPLES = sample_sealed_models()
+DTYPES = {"binary32": np.float32, "binary64": np.float64}
+Pair = tuple[TrainedModel, SealedModel]
+ARITHMETICS = ("binary32", "binary64")
+
+
+def two(exponent: int) -> Fraction:
+    return Fraction(2) ** exponent
+
+
+def two_f(exponent: int) -> float:
+    return math.ldexp(1.0, exponent)
+
+
+def bounds(budget: Budget) -> dict[str, Fraction]:
+    return {item.kind: item.bound for item in budget.items}
+
+
+def error(trained: TrainedModel, sealed: SealedModel, reals: list[Fraction]) -> Fraction:
+    """|device - trained| at real inputs, each rounded once to the arithmetic."""
+    device = score.log_odds(sealed, [round_to(sealed.arithmetic, real) for real in reals])
+    return abs(Fraction(device) - trained_log_odds(trained, reals)[0])
+
+
+# --- derived by hand --------------------------------------------------------------------------------------------------
+
+
+def test_budget_of_a_third_of_x_is_what_the_derivation_by_hand_gives() -> None:
+    # u = round(1/3) = 11184811 * 2^-25, so u - 1/3 = (3 * 11184811 - 2^25) / (3 * 2^25) = 1 / (3 * 2^25).
+    # x up to 10: units of 2^-20 (2^-49 where it is read as binary64 first). u x up to 3.4: units of 2^-22.
+    # The range 0 to 10 has no datum; the sum starts at 0, so it is exact.
+    trained, sealed = line("0", "10", scale=3.0)
+    budget = derive(trained, sealed)
+    assert bounds(budget) == {
+        "input": Fraction(1, 3) * (two(-21) + two(-50)),
+        "weight": Fraction(10, 3 * 2**25),
+        "product": two(-23),
+    }
+    assert budget.log_odds == sum(bounds(budget).values())
+
+
+def test_budget_of_binary64_reads_an_input_once() -> None:
+    trained, sealed = line("0", "10", scale=0.25, arithmetic="binary64")
+    assert bounds(derive(trained, sealed)) == {"input": 4 * two(-50)}
+
+
+def test_sum_costs_half_a_unit_of_the_largest_partial_sum() -> None:
+    # 1000 + x, |x| <= 2: units of 2^-14. The weight 1 makes the product exact.
+    trained, sealed = line("-1", "2", intercept=1000.0)
+    assert bounds(derive(trained, sealed))["sum"] == two(-15)
+
+
+def test_power_of_two_as_largest_magnitude_has_the_finer_unit_below_it() -> None:
+    assert rounding("binary32", Interval(Fraction(-1), Fraction(1, 3))) == two(-25)
+    assert rounding("binary32", Interval(Fraction(-1), Fraction(4, 3))) == two(-24)
+
+
+def test_input_limit_at_a_power_of_two_counts_the_reals_just_above_it() -> None:
+    trained, sealed = line("-1", "4", arithmetic="binary64")
+    # Units are 2^-51 below 4 and 2^-50 above.
+    real = 4 + two(-51) * Fraction(999, 1000)
+    assert round_to("binary64", real) == 4.0
+    assert error(trained, sealed, [real]) > two(-52)
+    assert bounds(derive(trained, sealed))["input"] == two(-51)
+
+
+def test_intercept_item_is_the_distance_of_the_device_intercept() -> None:
+    # 2^20 + 31/1024 rounds to 2^20 in binary32 (units of 2^-3).
+    trained, sealed = line("-1", "2", intercept=2.0**20 + 31 / 1024)
+    assert bounds(derive(trained, sealed))["intercept"] == Fraction(31, 1024)
+
+
+def test_datum_subtraction_is_free_where_sterbenz_proves_it_exact() -> None:
+    trained, sealed = line("273.15", "323.15")
+    assert sealed.terms[0].datum == 298.0
+    assert "datum" not in bounds(derive(trained, sealed))
+
+
+def test_datum_subtraction_costs_where_small_inputs_lose_bits() -> None:
+    # The datum is 5: below 2.5 the difference, up to 4.99, has units of 2^-21 and x has finer ones.
+    trained, sealed = line("0.01", "9.99")
+    assert sealed.terms[0].datum == 5.0
+    assert bounds(derive(trained, sealed))["datum"] == two(-22)
+
+
+def test_level_weights_cost_the_worst_level() -> None:
+    # Units of 2^-22 in [2, 4) and of 2^-19 in [16, 32): the second weight rounds by 3 * 2^-22.
+    weights = (3 + two_f(-24), 17 + 3 * two_f(-22))
+    trained = make_trained([IMPELLER], 3)
+    trained = replace(trained, scores=(replace(trained.scores[0], intercept=0.0, weights=weights),))
+    sealed = seal_request(trained, make_request([IMPELLER]))
+    assert bounds(derive(trained, sealed)) == {"weight": 3 * two(-22)}
+
+
+def test_threshold_item_is_the_rounding_of_the_logarithm() -> None:
+    # ln(1/25) by mpmath, to 50 digits.
+    trained, sealed = line("-1", "2", decision=DecisionRequest("1", "25", None))
+    budget = derive(trained, sealed)
+    with mpmath.workdps(50):
+        exact = mpmath.log(mpmath.mpf(1) / 25)
+        off = abs(mpmath.mpf(sealed.decision.low) - exact)
+        assert abs(mpmath.mpf(budget.threshold.numerator) / budget.threshold.denominator - off) < mpmath.mpf(10) ** -45
+        half = mpmath.mpf(budget.log_odds.numerator) / budget.log_odds.denominator + off
+        assert budget.band[0] <= exact - half <= math.nextafter(budget.band[0], math.inf)
+        assert math.nextafter(budget.band[1], -math.inf) <= exact + half <= budget.band[1]
+
+
+# --- one rounding -----------------------------------------------------------------------------------------------------
+
+
+@given(st.floats(width=32, allow_nan=False, allow_infinity=False))
+def test_half_unit_of_binary32_agrees_with_numpy(value: float) -> None:
+    assume(value != 0 and abs(value) < float(np.finfo(np.float32).max))
+    assert 2 * half_unit("binary32", abs(Fraction(value))) == Fraction(float(np.spacing(np.float32(abs(value)))))
+
+
+@given(st.floats(allow_nan=False, allow_infinity=False))
+def test_half_unit_of_binary64_agrees_with_the_standard_library(value: float) -> None:
+    assume(value != 0)
+    assert 2 * half_unit("binary64", abs(Fraction(value))) == Fraction(math.ulp(value))
+
+
+LIMITS = st.floats(-1e6, 1e6, width=32)
+
+
+@settings(max_examples=400, deadline=None)
+@given(LIMITS, LIMITS, st.floats(-1e4, 1e4, width=32), st.integers(0, 2**32))
+def test_no_operation_errs_by_more_than_its_item(one: float, other: float, constant: float, seed: int) -> None:
+    assume(one != other and constant != 0)
+    low, high = min(one, other), max(one, other)
+    limits, exact = Interval(Fraction(low), Fraction(high)), Fraction(constant)
+    rng = np.random.default_rng(seed)
+    # From anywhere, and (in magnitude) from every binade, so that exact and inexact sides of a datum are both met.
+    inside = np.concatenate(
+        [rng.uniform(low, high, 100), rng.choice((low, high), 100) * np.exp2(-30 * rng.random(100))]
+    )
+    values = np.clip(inside.astype(np.float32), np.float32(low), np.float32(high))
+    c = np.float32(constant)
+    for computed, told, bound in (
+        (values - c, lambda v: v - exact, difference_rounding("binary32", limits, exact)),
+        (values * c, lambda v: v * exact, product_rounding("binary32", exact, limits)),
+        (values + c, lambda v: v + exact, sum_rounding("binary32", limits.minus(-exact))),
+    ):
+        errors = [abs(Fraction(float(got)) - told(Fraction(float(v)))) for got, v in zip(computed, values, strict=True)]
+        assert max(errors) <= bound
+
+
+def test_product_with_a_power_of_two_is_exact_until_it_underflows() -> None:
+    ordinary = Interval(Fraction(-10), Fraction(10))
+    assert product_rounding("binary32", Fraction(8), ordinary) == 0
+    # 2^-149 is the smallest binary32 number: a quarter of 3 of them is rounded by a quarter of one.
+    assert product_rounding("binary32", Fraction(1, 4), ordinary) == two(-150)
+    assert product_rounding("binary32", Fraction(3, 2**100), Interval(two(-149), two(-140))) == two(-150)
+
+
+# --- never exceeded ---------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("limits", "given"),
+    [
+        (("1", "1.0002"), {"centre": 0.1, "intercept": -1.5}),
+        (("0.4999", "0.5001"), {"centre": 0.5}),
+        (("-1.5e-42", "2e-42"), {}),
+    ],
+)
+def test_budget_holds_at_every_number_of_a_narrow_range(limits: tuple[str, str], given: dict[str, float]) -> None:
+    trained, sealed = line(*limits, weight=1.375 + two_f(-28), scale=0.7, **given)
+    budget = derive(trained, sealed)
+    entry = sealed.inputs[0]
+    x, worst, count = np.float32(entry.low), Fraction(0), 0
+    while x <= entry.high:
+        value = Fraction(float(x))
+        for neighbour in (np.nextafter(x, np.float32(-np.inf)), np.nextafter(x, np.float32(np.inf))):
+            real = value + (Fraction(float(neighbour)) - value) / 2 * Fraction(999, 1000)
+            worst = max(worst, error(trained, sealed, [real]))
+        x, count = np.nextafter(x, np.float32(np.inf)), count + 1
+    assert count > 1000
+    assert budget.log_odds / 2 < worst <= budget.log_odds
+
+
+@st.composite
+def models(draw: st.DrawFn) -> tuple[TrainedModel, SealedModel]:
+    """A model of one to five inputs: ranges round 0 and away from it, of widths from 1e-3 to 1e6, and levels."""
+    quantities = []
+    for position in range(draw(st.integers(1, 5))):
+        if draw(st.integers(0, 4)) == 0:
+            levels = tuple(f"l{rank}" for rank in range(draw(st.integers(2, 5))))
+            quantities.append(Quantity(f"q{position}", levels=levels))
+            continue
+        low = draw(st.decimals(-1000, 1000, places=3))
+        width = draw(st.decimals("0.001", 1_000_000, places=3))
+        quantities.append(Quantity(f"q{position}", "", str(low), str(low + width)))
+    seed = draw(st.integers(0, 2**32))
+    trained = make_trained(quantities, seed, weight_sd=draw(st.sampled_from((0.01, 1.0, 100.0))))
+    return trained, seal_request(trained, make_request(quantities, arithmetic=draw(st.sampled_from(ARITHMETICS))))
+
+
+@settings(max_examples=150, deadline=None)
+@given(models(), st.data())
+def test_no_real_input_errs_by_more_than_the_budget(
+    pair: tuple[TrainedModel, SealedModel], data: st.DataObject
+) -> None:
+    trained, sealed = pair
+    budget = derive(trained, sealed)
+    share = st.fractions(0, 1)
+    for _ in range(10):
+        reals = [
+            Fraction(data.draw(st.integers(0, len(entry.levels) - 1)))
+            if entry.levels
+            else Fraction(entry.low) + data.draw(share) * (Fraction(entry.high) - Fraction(entry.low))
+            for entry in sealed.inputs
+        ]
+        assert error(trained, sealed, reals) <= budget.log_odds
+
+
+def test_real_read_as_binary64_before_binary32_is_covered() -> None:
+    # Just above the midpoint of two binary32 numbers, the upper one even: binary64 rounds it to the midpoint, ties go
+    # up or down to even; the two roundings move the real by more than half a unit.
+    trained, sealed = line("0.5", "1.9", intercept=-1.1875)
+    real = 1 + 2 * two(-23) + two(-24) + two(-80)
+    twice = round_to("binary32", Fraction(round_to("binary64", real)))
+    assert abs(Fraction(twice) - real) > two(-24)
+    budget = derive(trained, sealed)
+    assert abs(Fraction(score.log_odds(sealed, [twice])) - trained_log_odds(trained, [real])[0]) <= budget.log_odds
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_device_probability_lies_within_its_bound(name: str) -> None:
+    trained, sealed = SAMPLES[name]
+    budget = derive(trained, sealed)
+    bound = mpmath.mpf(budget.probability.numerator) / budget.probability.denominator
+    for row in trained.witness:
+        reals = [Fraction(value) for value in row.inputs]
+        device = score.probability(sealed, [round_to(sealed.arithmetic, real) for real in reals])
+        with mpmath.workdps(40):
+            z = trained_log_odds(trained, reals)[0]
+            exact = 1 / (1 + mpmath.exp(-mpmath.mpf(z.numerator) / z.denominator))
+            assert abs(mpmath.mpf(device) - exact) <= bound
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_reach_is_the_range_of_trained_log_odds_over_the_corners(name: str) -> None:
+    trained, sealed = SAMPLES[name]
+    corners = itertools.islice(
+        itertools.product(
+            *(range(len(entry.levels)) if entry.levels else (entry.low, entry.high) for entry in sealed.inputs)
+        ),
+        1000,
+    )
+    found = [trained_log_odds(trained, [Fraction(value) for value in corner])[0] for corner in corners]
+    low, high = derive(trained, sealed).reach
+    assert low <= min(found)
+    assert max(found) <= high
+    if len(found) < 1000:
+        assert math.nextafter(low, math.inf) >= min(found)
+        assert math.nextafter(high, -math.inf) <= max(found)
+
+
+def test_outside_the_band_the_device_decides_as_the_exact_threshold_does() -> None:
+    trained, sealed = line("-3", "4", weight=1.3, scale=0.7, decision=DecisionRequest("1", "3", None))
+    budget = derive(trained, sealed)
+    threshold = mpmath.log(mpmath.mpf(1) / 3)
+    inside = 0
+    for step in range(-400, 400):
+        # -0.5916 is where 1.3 x / 0.7 meets ln(1/3).
+        real = Fraction(float(threshold)) * Fraction(7, 13) + step * two(-28)
+        z = trained_log_odds(trained, [real])[0]
+        decision = score.decide(sealed, [round_to("binary32", real)])
+        if budget.band[0] <= z <= budget.band[1]:
+            inside += 1
+        else:
+            assert decision == int(z > Fraction(float(threshold)))
+    assert 0 < inside < 800
+
+
+def test_exact_log_odds_agree_with_the_exact_fold() -> None:
+    for trained, sealed in SAMPLES.values():
+        folded = fold(trained)[0]
+        inputs = [Fraction(value) for value in trained.witness[0].inputs]
+        columns = [
+            inputs[term.of[0]] if term.level is None else Fraction(inputs[term.of[0]] == term.level)
+            for term in trained.terms
+        ]
+        total = folded.intercept + sum(w * v for w, v in zip(folded.weights, columns, strict=True))
+        assert trained_log_odds(trained, inputs) == (total,), sealed.name
+
+
+# --- mistakes show ----------------------------------------------------------------------------------------------------
+
+
+def test_wrong_fold_makes_the_budget_large() -> None:
+    trained, sealed = SAMPLES["pump_binary32"]
+    wrong = replace(sealed, intercepts=(trained.intercept,))
+    right = derive(trained, sealed).log_odds
+    assert derive(trained, wrong).log_odds > 1000 * right
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_last_bit_of_a_weight_makes_the_budget_larger(arithmetic: str) -> None:
+    trained, sealed = SAMPLES[f"pump_{arithmetic}"]
+    dtype = DTYPES[arithmetic]
+    changed = float(np.nextafter(dtype(sealed.terms[0].weights[0][0]), dtype(np.inf)))
+    terms = (replace(sealed.terms[0], weights=((changed,),)), *sealed.terms[1:])
+    assert derive(trained, replace(sealed, terms=terms)).log_odds > derive(trained, sealed).log_odds
+
+
+def test_overflow_within_the_ranges_is_refused_with_its_place() -> None:
+    trained, sealed = line("-1e38", "3e38", weight=2.0)
+    with pytest.raises(SealError) as caught:
+        derive(trained, sealed)
+    assert str(caught.value) == (
+        'product with the weight of "x": can exceed the largest binary32 number within the ranges; '
+        "narrow the ranges, rescale the inputs, or choose binary64"
+    )
+
+
+# --- the witness ------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", SAMPLES)
+def test_reference_scorer_stands_within_budget_of_the_witness(name: str) -> None:
+    trained, sealed = SAMPLES[name]
+    misses = witness_misses(trained, sealed, derive(trained, sealed))
+    assert (misses.rows, misses.compared) == ((), len(trained.witness))
+    assert 0 <= misses.largest <= 1
+
+
+def test_witness_off_by_more_than_budget_and_bound_is_a_miss() -> None:
+    trained, sealed = line("0", "10", scale=3.0)
+    budget = derive(trained, sealed)
+    # 6 is a binary32 number and round(1/3) * 6 rounds to 2: the reference scorer is off by nothing.
+    bound = 2.0**-30
+    allowed = float(budget.log_odds) + bound
+    rows = (
+        Witness((6.0,), (2.0 + allowed * 0.999,), (bound,)),
+        Witness((6.0,), (2.0 - allowed * 1.001,), (bound,)),
+        Witness((11.0,), (100.0,), (bound,)),
+        Witness((math.nan,), (100.0,), (bound,)),
+    )
+    misses = witness_misses(replace(trained, witness=rows), sealed, budget)
+    assert (misses.rows, misses.compared) == ((1,), 2)
+    assert misses.largest == pytest.approx(1.001, rel=1e-4)
+
+
+# --- advice -----------------------------------------------------------------------------------------------------------
+
+
+def test_advice_names_the_costliest_item_the_arithmetic_and_the_origin() -> None:
+    # Half a unit at 1050 is 2^-14, 6.11e-5 rounded up; after subtracting 1000, at 50, it is 2^-19.
+    trained, sealed = line("950", "1050", intercept=-1000.0)
+    problem = advise(trained, sealed, derive(trained, sealed), Fraction(1, 100_000))
+    assert str(problem) == (
+        'error budget: 6.11e-05 in log-odds is more than the tolerance 1e-05, and the costliest item is input "x" '
+        "rounded to binary32, 6.11e-05; choose binary64 (its bound is 1.14e-13), or have the device subtract 1000 kPa "
+        'from "x" before the value becomes a float (the bound is then 1.91e-06), or raise the tolerance to 6.11e-05'
+    )
+
+
+def test_advice_offers_nothing_that_would_not_fit() -> None:
+    trained, sealed = line("950", "1050", intercept=-1000.0, arithmetic="binary64")
+    problem = advise(trained, sealed, derive(trained, sealed), Fraction(1, 10**20))
+    assert problem.todo == "raise the tolerance to 1.14e-13"
+
+
+# --- figures ----------------------------------------------------------------------------------------------------------
+
+
+def test_log_odds_bound_is_the_sum_of_its_items_and_none_is_zero() -> None:
+    for trained, sealed in SAMPLES.values():
+        budget = derive(trained, sealed)
+        assert budget.log_odds == sum(item.bound for item in budget.items)
+        assert all(item.bound > 0 for item in budget.items)
+
+
+def test_derivation_for_forty_inputs_takes_less_than_a_tenth_of_a_second() -> None:
+    quantities = [replace((SUCTION, FLOW, CURRENT, WATER)[n % 4], name=f"q{n}") for n in range(40)]
+    trained = make_trained(quantities, 5)
+    sealed = seal_request(trained, make_request(quantities))
+    times = []
+    for _ in range(3):
+        start = time.process_time()
+        derive(trained, sealed)
+        times.append(time.process_time() - start)
+    assert min(times) < 0.1
