@@ -25,28 +25,30 @@ from scipy.linalg import lapack
 from threadpoolctl import ThreadpoolController
 
 from runtime_min.errors import FitError, Problem
-from trainer.exact_sums import UNIT_ROUNDOFF
+from trainer.approach import approach, sample, sample_size
 from trainer.grid import WEIGHT_STEP
 from trainer.objective import (
     BLOCK_ROWS,
+    Checked,
     Objective,
     Prior,
-    gradient,
+    checked_gradient,
     gradient_and_hessian,
     gradient_in_pairs,
     log_odds,
     objective_of,
     slopes,
-    term_sizes,
 )
 
 Array = NDArray[np.float64]
 
 _WHOLE_STEP = 1.0  # R up to which a Newton step is taken whole
-_SETTLED = 1e-6  # R after which the Hessian at hand is the optimum's to about this relative error
+_SETTLED = 1e-5  # R after which the Hessian at hand is the optimum's to less than this relative error
+_APPROACHED = 3e-5  # R of an approaching step after which one Newton step settles
+_SAMPLE_SETTLED = 0.1  # the optimum of a sample is farther than that from the optimum of all rows
 _MOST_STEPS = 200
-_MOST_PAIR_STEPS = 3
 _LEAST_PIVOT = 1e-13  # of the scaled Hessian, whose entries carry errors of some 1e-15
+_DOUBLE_STEPS, _PAIR_STEPS = 2, 3  # more Newton steps, at most, where a weight lies near a midpoint of the grid
 _LEAST_DOUBT = 1e-12  # no weight nearer to a midpoint of the grid than this is rounded without a closer look
 _DOUBT_PER_CHANGE = 100.0
 
@@ -60,7 +62,7 @@ class Solution:
     intercept, weights: multiples of 2^-30. covariance: (d + 1, d + 1), intercept first, the inverse Hessian of the
     negative log posterior at the optimum. At the returned weights: gradient: the largest |gradient_i| / Σ|terms that
     make it|; newton_decrement: sqrt(gᵀ H⁻¹ g); distance: a bound on |weight − optimum| in posterior sd, the largest
-    over intercept and weights.
+    over intercept and weights: it says what the grid costs.
     """
 
     intercept: float
@@ -100,49 +102,60 @@ def solve(
 ) -> Solution:
     """The MAP weights of standardised columns (n, d) and labels (n,) 0/1; row_weights (n,) >= 0; start (d + 1,).
 
-    Raises FitError where no optimum is found; `judge` can say why. `block_rows` changes no bit of the weights.
+    Raises FitError where there is no optimum to find; `judge` says why. `start` and `block_rows` change no bit of the
+    weights.
     """
     objective = objective_of(columns, labels, row_weights, prior)
     theta = np.zeros(columns.shape[1] + 1) if start is None else np.array(start, dtype=np.float64)
-    with _threads.limit(limits=1, user_api="blas"), np.errstate(over="ignore", under="ignore", invalid="ignore"):
-        theta, factor = _newton(objective, theta, block_rows)
-        covariance = factor.inverse()
-        theta = _to_grid(objective, theta, covariance, block_rows)
-        return _certified(objective, theta, covariance, block_rows)
+    with _threads.limit(limits=1, user_api="blas"), np.errstate(all="ignore"):
+        z = None
+        if size := sample_size(objective):
+            near = _newton(sample(objective, size), theta, None, _SAMPLE_SETTLED, block_rows)
+            if near is not None:
+                theta, z = approach(objective, near[0], near[1].solve, _APPROACHED, block_rows)
+        found = _newton(objective, theta, z, _SETTLED, block_rows)
+        if found is None:
+            raise FitError(
+                Problem(
+                    "rows",
+                    "the fit finds no optimum: the curvature vanishes along some weights",
+                    "give every term a prior with a finite sd, or remove columns that repeat others",
+                )
+            )
+        covariance = found[1].inverse()
+        theta, checked = _to_grid(objective, found[0], covariance, block_rows)
+    return _certified(theta, checked, covariance)
 
 
-def _newton(objective: Objective, theta: Array, block_rows: int) -> tuple[Array, _Factor]:
-    """Newton steps from any start until a step changes no log-odds by more than `_SETTLED`."""
-    z = log_odds(objective.columns, theta)
+def _newton(
+    objective: Objective, theta: Array, z: Array | None, settled: float, block_rows: int
+) -> tuple[Array, _Factor] | None:
+    """Newton steps from any start until one changes no log-odds by more than `settled`; z are the log-odds of θ.
+
+    None where the slope vanishes together with the curvature, or is not settled after `_MOST_STEPS`.
+    """
+    if z is None:
+        z = log_odds(objective.columns, theta)
     for _ in range(_MOST_STEPS):
         slope, hessian = gradient_and_hessian(objective, theta, z, block_rows=block_rows)
-        exact = _factor(hessian)
-        factor = exact or _factor(_curvature_bound(objective))
-        if factor is None:
-            break
-        step = -factor.solve(slope)
+        factor = _factor(hessian)
+        safe = factor or _factor(_curvature_bound(objective, block_rows))
+        if safe is None:
+            return None
+        step = -safe.solve(slope)
         reached = log_odds(objective.columns, theta + step)
         along = reached - z
         change = float(np.abs(along).max())
+        if not math.isfinite(change):
+            return None
         if change <= _WHOLE_STEP:
             theta, z = theta + step, reached
-            if change <= _SETTLED:
-                if exact is None:  # the slope vanishes together with the curvature: there is no optimum to end at
-                    break
-                return theta, exact
+            if change <= settled:
+                return None if factor is None else (theta, factor)
         else:
-            length = _search(objective, theta, step, z, along)
-            theta = theta + length * step
+            theta = theta + _search(objective, theta, step, z, along) * step
             z = log_odds(objective.columns, theta)
-        if not np.isfinite(theta).all():
-            break
-    raise FitError(
-        Problem(
-            "rows",
-            "the fit finds no optimum: its curvature vanishes along some weights",
-            "give every term a prior with a finite sd, or remove columns that repeat others or separate the classes",
-        )
-    )
+    return None
 
 
 def _search(objective: Objective, theta: Array, step: Array, z: Array, along: Array) -> float:
@@ -156,7 +169,7 @@ def _search(objective: Objective, theta: Array, step: Array, z: Array, along: Ar
     first = slope_at(0.0)
     low, high = 0.0, math.inf
     length = 1.0
-    for _ in range(200):
+    for _ in range(100):
         slope = slope_at(length)
         if slope > 0.0:
             high = length
@@ -180,51 +193,58 @@ def _factor(hessian: Array) -> _Factor | None:
     return _Factor(lower, scaling)
 
 
-def _curvature_bound(objective: Objective) -> Array:
-    """¼ Xᵀ Ω X + prior, no less than the Hessian anywhere (Böhning and Lindsay 1988): for a start so far out that the
-    Hessian vanishes."""
-    z = np.zeros(len(objective.columns))
-    return gradient_and_hessian(objective, objective.means, z)[1]
+def _curvature_bound(objective: Objective, block_rows: int) -> Array:
+    """¼ Xᵀ Ω X + prior, no less than the Hessian anywhere (Böhning and Lindsay, Annals of the Institute of Statistical
+    Mathematics 40 (1988)): for a place so far out that the Hessian vanishes."""
+    level = np.zeros(len(objective.columns))
+    return gradient_and_hessian(objective, objective.means, level, block_rows=block_rows)[1]
 
 
-def _to_grid(objective: Objective, theta: Array, covariance: Array, block_rows: int) -> Array:
-    """Round to the grid; in pairs of doubles where the doubt about a weight reaches a midpoint."""
-    for attempt in range(1 + _MOST_PAIR_STEPS):
+def _to_grid(objective: Objective, theta: Array, covariance: Array, block_rows: int) -> tuple[Array, Checked]:
+    """θ on the grid and the gradient there; in pairs of doubles where the doubt about a weight reaches a midpoint.
+
+    `offset` is one more Newton step, from the rounded weights. What it changes is a sample of what rounding does to a
+    weight; the largest sample in posterior sd stands for all, so that no weight passes by a lucky one.
+    """
+    sds = np.sqrt(np.diagonal(covariance))
+    for attempt in range(_DOUBLE_STEPS + _PAIR_STEPS):
         rounded = np.rint(theta / WEIGHT_STEP) * WEIGHT_STEP
-        if attempt == 0:
-            slope, z = gradient(objective, rounded, block_rows=block_rows)
-            noise = _rounding_of_step(objective, rounded, z, covariance, block_rows)
+        if attempt < _DOUBLE_STEPS:
+            checked = checked_gradient(objective, rounded, block_rows=block_rows)
+            slope = checked.slope
         else:
-            slope, noise = gradient_in_pairs(objective, rounded), np.zeros(len(theta))
+            slope = gradient_in_pairs(objective, rounded)
         offset = -(covariance @ slope)
         change = np.abs(rounded + offset - theta)
-        doubt = np.maximum(np.maximum(_DOUBT_PER_CHANGE * change, _LEAST_DOUBT), noise)
-        theta = rounded + offset
+        doubt = np.maximum(_DOUBT_PER_CHANGE * sds * (change / sds).max(), _LEAST_DOUBT)
         if (np.abs(offset) + doubt < 0.5 * WEIGHT_STEP).all():
-            return rounded
-    return rounded + np.rint(offset / WEIGHT_STEP) * WEIGHT_STEP
+            break
+        theta = rounded + offset
+    final = rounded + np.rint(offset / WEIGHT_STEP) * WEIGHT_STEP
+    if attempt:
+        checked = checked_gradient(objective, final, block_rows=block_rows)
+    return final, checked
 
 
-def _rounding_of_step(objective: Objective, theta: Array, z: Array, covariance: Array, block_rows: int) -> Array:
-    """Bound on what rounding in the gradient does to a Newton step: |C| (k u Σ|terms| + (d + 2) u Σ|terms of z|)."""
-    additions = block_rows + len(objective.columns) // block_rows + 8
-    sizes = term_sizes(objective, theta, z, block_rows=block_rows)
-    bound: Array = np.abs(covariance) @ (additions * UNIT_ROUNDOFF * sizes)
-    return bound
+def _certified(theta: Array, checked: Checked, covariance: Array) -> Solution:
+    """The certificate at θ.
 
-
-def _certified(objective: Objective, theta: Array, covariance: Array, block_rows: int) -> Solution:
-    slope, z = gradient(objective, theta, block_rows=block_rows)
-    sizes = term_sizes(objective, theta, z, block_rows=block_rows)
-    step = covariance @ slope
-    decrement = math.sqrt(max(float(slope @ step), 0.0))
+    With e the distance to the optimum, λ the decrement and t the largest change of a log-odds along e, the Hessians on
+    the way differ from H by at most the factor exp(t). So |e|_H <= e^t λ and |e − H⁻¹g|_H <= (e^t − 1) λ, where
+    t <= ρ |e|_H, ρ = Σ_j sd_j max|x_j|; for a = ρ λ <= 0.2 the fixed point t = a e^t lies below 1.3 a. A component in
+    posterior sd is never more than the H-norm.
+    """
+    step = covariance @ checked.slope
+    decrement = math.sqrt(max(float(checked.slope @ step), 0.0))
     sds = np.sqrt(np.diagonal(covariance))
-    relative = np.abs(slope) / np.where(sizes > 0, sizes, 1.0)
+    reach = float(sds @ checked.largest) * decrement
+    beyond = math.expm1(1.3 * reach) * decrement if reach <= 0.2 else math.inf
+    relative = np.abs(checked.slope) / np.where(checked.sizes > 0, checked.sizes, 1.0)
     return Solution(
         intercept=float(theta[0]) + 0.0,
         weights=tuple((theta[1:] + 0.0).tolist()),
         covariance=tuple(map(tuple, covariance.tolist())),
         gradient=float(relative.max()),
         newton_decrement=decrement,
-        distance=float((np.abs(step) / sds).max()),
+        distance=float((np.abs(step) / sds).max()) + beyond,
     )
