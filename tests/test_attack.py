@@ -8,8 +8,8 @@ from fractions import Fraction
 
 import numpy as np
 import pytest
-from line_models import line
 from models import IMPELLER, make_request, make_trained, sample_sealed_models
+from one_input import line
 
 from export.attack import attack
 from export.budget import derive

@@ -13,7 +13,6 @@ import numpy as np
 import pytest
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
-from line_models import line
 from models import (
     CURRENT,
     FLOW,
@@ -25,6 +24,7 @@ from models import (
     make_trained,
     sample_sealed_models,
 )
+from one_input import line
 
 from export.budget import Budget, advise, derive, witness_misses
 from export.exact import trained_log_odds
