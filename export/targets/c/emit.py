@@ -54,11 +54,11 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     )
 
 
-def vector_words(vector: Vector, kind: str) -> str:
-    """Inputs, log-odds and probability of one row as words of bits, in that order, separated by commas."""
+def vector_words(vector: Vector, kind: str) -> list[str]:
+    """Inputs, log-odds and probability of one row as words of bits, in that order."""
     parts = [lexical.words(value, kind) for value in vector.inputs]
     parts += [lexical.words_of_bits(bits, kind) for bits in (*vector.expected.log_odds, *vector.expected.probability)]
-    return ", ".join(word for part in parts for word in part)
+    return [word for part in parts for word in part]
 
 
 def can_be_subnormal(sealed: SealedModel, term: Term) -> bool:

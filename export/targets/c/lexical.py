@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 import re
 import textwrap
+from collections.abc import Sequence
 from decimal import Decimal
 from fractions import Fraction
 
@@ -79,9 +80,10 @@ def comment_lines(text: str, prefix: str = " * ") -> str:
     return "\n".join((prefix + line).rstrip() for line in lines or [""])
 
 
-def wrapped(items: str, first: str, other: str) -> str:
-    """A list of literals, separated by commas, broken into lines; `first` and `other` begin them."""
-    return textwrap.fill(items, LINE_WIDTH, initial_indent=first, subsequent_indent=other)
+def wrapped(items: Sequence[str], first: str, other: str) -> str:
+    """A list of literals, separated by commas, broken into lines between items; `first` and `other` begin them."""
+    whole = ", ".join(item.replace(" ", "\0") for item in items)
+    return textwrap.fill(whole, LINE_WIDTH, initial_indent=first, subsequent_indent=other).replace("\0", " ")
 
 
 def table(cells: list[str], labels: list[str]) -> str:

@@ -121,7 +121,7 @@ def _zig() -> Compiler | None:
         return None
     zig = (sys.executable, "-m", "ziglang")
     version = _first_line((*zig, "version"))
-    return version and Compiler(f"zig {version}", (*zig, "cc"), (*zig, "c++"), SECONDS_ZIG) or None
+    return Compiler(f"zig {version}", (*zig, "cc"), (*zig, "c++"), SECONDS_ZIG) if version else None
 
 
 def _first_line(command: tuple[str, ...]) -> str | None:
