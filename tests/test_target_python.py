@@ -1,0 +1,482 @@
+"""The generated Python module: bits, policies, text from the plan, self-test, and the runner that checks it.
+
+Expected values: the reference scorer's bits (what an artefact must reproduce), hand calculation on models whose numbers
+are short binary fractions, and mpmath for the logistic function.
+"""
+
+from __future__ import annotations
+
+import ast
+import functools
+import io
+import math
+import re
+import struct
+import subprocess
+import sys
+import tokenize
+import types
+from dataclasses import replace
+from fractions import Fraction
+from pathlib import Path
+from typing import Any
+
+import mpmath
+import numpy as np
+import pytest
+from line_models import HOSTILE, level_model, line_model, named_model, with_text
+from models import sample_sealed_models
+
+from export.targets import (
+    SELF_TEST_ROUNDING,
+    SELF_TEST_SUBNORMALS,
+    SELF_TEST_TABLES,
+    SELF_TEST_VECTOR,
+    TARGETS,
+    Output,
+)
+from export.targets.python import lexical, runner
+from export.vectors import expected, make_vectors, next_to, self_test_of
+from runtime_min.arithmetic import raw_bits
+from runtime_min.errors import ReleaseError
+from runtime_min.model import SealedModel
+from runtime_min.validity import device_numbers
+
+MODELS = {name: sealed for name, (_, sealed) in sample_sealed_models().items()}
+ARITHMETICS = ("binary64", "binary32")
+PYTHON = TARGETS["python"]
+NAN, INFINITY = math.nan, math.inf
+
+# Names that the module or Python itself uses, lower-case as a plan's are.
+# fmt: off
+TRICKY_NAMES = (
+    "inputs", "round", "abs", "len", "range", "z", "e", "k", "r", "p", "s", "t", "u", "x", "x_x", "low", "high",
+    "low_low", "nan", "infinity", "weight", "weights", "weights_x", "datum", "typical", "fault", "model_id",
+    "inputs_x", "log_odds", "probability", "decide", "check_inputs", "self_test", "number", "numbers", "crc", "byte",
+    "first", "rest", "print", "type", "object", "none", "value", "layout", "count", "bound", "c0", "c1", "threshold",
+    "exp",
+)
+# fmt: on
+
+
+@functools.cache
+def source(sealed: SealedModel) -> str:
+    """The module's text."""
+    return PYTHON.emit(sealed, self_test_of(sealed, make_vectors(sealed))).decode("ascii")
+
+
+def loaded(text: str) -> dict[str, Any]:
+    """The names of the module."""
+    names: dict[str, Any] = {"__name__": "generated"}
+    exec(compile(text, "generated.py", "exec"), names)
+    return names
+
+
+def output(module: dict[str, Any], inputs: Any, arithmetic: str) -> Output:
+    """What the module says of one row."""
+    return Output(
+        module["check_inputs"](inputs),
+        (raw_bits(module["log_odds"](inputs), arithmetic),),
+        (raw_bits(module["probability"](inputs), arithmetic),),
+        module["decide"](inputs),
+    )
+
+
+def written(sealed: SealedModel, folder: Path, text: str | None = None) -> Path:
+    """The artefact as a file."""
+    path = folder / PYTHON.file(sealed)
+    path.write_text(source(sealed) if text is None else text, encoding="ascii", newline="\n")
+    return path
+
+
+# --- the same bits ---------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", MODELS)
+def test_module_gives_the_bits_of_the_reference_scorer(name: str, tmp_path: Path) -> None:
+    sealed = MODELS[name]
+    vectors = make_vectors(sealed)
+    runs = list(PYTHON.run(written(sealed, tmp_path), sealed, [vector.inputs for vector in vectors], True))
+    assert len(runs) == 3
+    for run in runs:
+        assert (run.ran, run.trouble, run.model_id, run.self_test) == (True, None, sealed.model_id, 0)
+        assert list(run.outputs) == [vector.expected for vector in vectors], run.what
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_quick_run_is_one_fresh_interpreter(arithmetic: str, tmp_path: Path) -> None:
+    sealed = line_model(arithmetic)
+    runs = list(PYTHON.run(written(sealed, tmp_path), sealed, [(4.0,)], False))
+    assert [run.outputs[0].decision for run in runs] == [1]
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_module_rounds_inputs_that_are_no_numbers_of_the_arithmetic(arithmetic: str) -> None:
+    sealed = MODELS[f"pump_{arithmetic}"]
+    module = loaded(source(sealed))
+    third = tuple(float(entry.low + (entry.high - entry.low) / 3) for entry in sealed.inputs)
+    rows = [third, (1e39,) * 6, (-1e39,) * 6, (1e39, *third[1:]), (3.4028235677973366e38, *third[1:])]
+    for row in rows:
+        assert output(module, row, arithmetic) == expected(sealed, row)
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_names_of_inputs_never_meet_the_module_s_own(arithmetic: str, tmp_path: Path) -> None:
+    sealed = named_model(arithmetic, list(TRICKY_NAMES))
+    vectors = make_vectors(sealed)
+    for run in PYTHON.run(written(sealed, tmp_path), sealed, [vector.inputs for vector in vectors], False):
+        assert (run.trouble, run.self_test) == (None, 0)
+        assert list(run.outputs) == [vector.expected for vector in vectors]
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_numpy_scalars_give_the_bits_of_floats(arithmetic: str) -> None:
+    sealed = MODELS[f"pump_{arithmetic}"]
+    module = loaded(source(sealed))
+    for vector in make_vectors(sealed)[:60]:
+        row = tuple(float(np.float32(x)) for x in vector.inputs)
+        for kind in (np.float32, np.float64):
+            assert output(module, [kind(x) for x in row], arithmetic) == expected(sealed, row)
+        assert output(module, np.array(row, np.float32), arithmetic) == expected(sealed, row)
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_whole_numbers_and_fractions_are_taken(arithmetic: str) -> None:
+    module = loaded(source(line_model(arithmetic)))
+    assert [module["log_odds"]([x]) for x in (4, True, Fraction(5, 2), (np.int16(6)))] == [1.0, -0.5, 0.25, 2.0]
+
+
+# --- by hand ---------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+@pytest.mark.parametrize(
+    ("outside", "missing", "given", "want"),
+    [
+        # z = -1 + x / 2; a fault is None
+        ("fault", "fault", (0.0, -0.0, 8.0, 5.0), (-1.0, -1.0, 3.0, 1.5)),
+        ("fault", "fault", (-1.0, 9.0, INFINITY, -INFINITY, NAN), (None, None, None, None, None)),
+        ("clamp", "fault", (-1.0, 9.0, INFINITY, -INFINITY, NAN), (-1.0, 3.0, 3.0, -1.0, None)),
+        ("fault", "typical", (-1.0, 9.0, INFINITY, -INFINITY, NAN), (None, None, None, None, 0.5)),
+        ("clamp", "typical", (-1.0, 9.0, INFINITY, -INFINITY, NAN), (-1.0, 3.0, 3.0, -1.0, 0.5)),
+    ],
+)
+def test_policies_by_hand(
+    arithmetic: str, outside: str, missing: str, given: tuple[float, ...], want: tuple[float | None, ...]
+) -> None:
+    module = loaded(source(line_model(arithmetic, outside=outside, missing=missing)))
+    for x, z in zip(given, want, strict=True):
+        if z is None:
+            assert math.isnan(module["log_odds"]([x]))
+            assert math.isnan(module["probability"]([x]))
+            assert (module["check_inputs"]([x]), module["decide"]([x])) == (1, module["FAULT"])
+        else:
+            assert module["log_odds"]([x]) == z
+            assert (module["check_inputs"]([x]), module["decide"]([x])) == (0, int(z >= 1.0))
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+@pytest.mark.parametrize(("missing", "when_missing"), [("fault", None), ("typical", -3.0)])
+def test_levels_by_hand(arithmetic: str, missing: str, when_missing: float | None) -> None:
+    module = loaded(source(level_model(arithmetic, missing=missing)))
+    right = [(0.0, -1.0), (-0.0, -1.0), (1.0, -0.75), (2.0, -3.0), (NAN, when_missing)]
+    for x, z in [*right, *((wrong, None) for wrong in (0.5, 1.5, 3.0, -1.0, INFINITY, -INFINITY))]:
+        found = module["log_odds"]([x])
+        assert found == z if z is not None else math.isnan(found)
+        assert module["check_inputs"]([x]) == int(z is None)
+        assert module["decide"]([x]) == (-2 if z is None else int(z >= -1.0))
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_between_two_thresholds_is_no_call(arithmetic: str) -> None:
+    sealed = line_model(arithmetic)
+    module = loaded(source(replace(sealed, decision=replace(sealed.decision, low=0.0, high=2.0))))
+    assert [module["decide"]([x]) for x in (1.5, 2.0, 5.5, 6.0, NAN)] == [0, -1, -1, 1, -2]
+    assert (module["NO_CALL"], module["FAULT"], module["THRESHOLDS"]) == (-1, -2, (0.0, 2.0))
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_zero_log_odds_keep_their_sign_and_give_one_half(arithmetic: str) -> None:
+    """IEEE 754-2019, 6.3: +0 + -0 is +0, so that log-odds from an intercept of 0 are +0."""
+    sealed = replace(line_model(arithmetic), intercepts=(0.0,))
+    module = loaded(source(sealed))
+    for x in (0.0, -0.0):
+        assert raw_bits(module["log_odds"]([x]), arithmetic) == 0
+        assert module["probability"]([x]) == 0.5
+
+
+@pytest.mark.parametrize(("arithmetic", "digits", "ulps"), [("binary64", 53, 3.0), ("binary32", 24, 2.41)])
+def test_probability_is_the_logistic_function_to_a_few_ulps(arithmetic: str, digits: int, ulps: float) -> None:
+    """Against mpmath at 60 digits. Bounds in ulps: derived (binary64), found by trying every argument (binary32)."""
+    mpmath.mp.dps = 60
+    sealed = line_model(arithmetic, outside="clamp")
+    wide = replace(sealed, inputs=(replace(sealed.inputs[0], low=-150.0, high=150.0),))
+    module = loaded(source(wide))
+    for step in range(-600, 601):
+        x = step / 4
+        z = module["log_odds"]([x])
+        exact = 1 / (1 + mpmath.exp(-mpmath.mpf(z)))
+        ulp = mpmath.mpf(2) ** (mpmath.floor(mpmath.log(exact, 2)) + 1 - digits)
+        assert abs(mpmath.mpf(module["probability"]([x])) - exact) <= ulps * ulp, z
+
+
+def test_wrong_number_of_inputs_is_named() -> None:
+    module = loaded(source(MODELS["pump_binary32"]))
+    for count in (0, 5, 7):
+        for function in ("log_odds", "probability", "decide", "check_inputs"):
+            with pytest.raises(ValueError, match=f"^pump_binary32 takes 6 inputs, found {count}$"):
+                module[function]([1.0] * count)
+
+
+# --- what stands in the module ---------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", MODELS)
+def test_module_names_the_model(name: str) -> None:
+    sealed = MODELS[name]
+    module = loaded(source(sealed))
+    assert module["MODEL_ID"] == sealed.model_id
+    assert module["ARITHMETIC"] == sealed.arithmetic
+    assert module["CLASSES"] == sealed.classes
+    assert module["THRESHOLDS"] == (sealed.decision.low, sealed.decision.high)
+    assert module["INPUTS"] == tuple((entry.name, entry.unit, entry.low, entry.high) for entry in sealed.inputs)
+    assert sealed.model_id in module["__doc__"]
+    assert "not a safety function" in module["__doc__"]
+    for entry in sealed.inputs:
+        assert entry.unit in module["__doc__"]
+
+
+@pytest.mark.parametrize("name", MODELS)
+def test_every_number_is_written_in_its_shortest_decimal(name: str) -> None:
+    sealed = MODELS[name]
+    numbers = {token.string for token in tokens(source(sealed)) if token.type == tokenize.NUMBER}
+    for place, number in device_numbers(sealed):
+        assert repr(abs(number)) in numbers, place
+
+
+@pytest.mark.parametrize("name", MODELS)
+def test_module_imports_math_and_struct_alone_and_is_python_3_8(name: str) -> None:
+    tree = ast.parse(source(MODELS[name]), feature_version=(3, 8))
+    imports = [node for node in ast.walk(tree) if isinstance(node, ast.Import | ast.ImportFrom)]
+    assert [ast.unparse(node) for node in imports] == ["import math", "import struct"]
+
+
+def test_module_carries_no_date_and_no_licence() -> None:
+    text = source(MODELS["pump_binary32"])
+    assert not re.search(r"\b20[2-9][0-9]\b|licen[cs]e\b|copyright|warrant", text, re.IGNORECASE)
+    assert text == source(MODELS["pump_binary32"])
+
+
+@pytest.mark.parametrize("name", ["pump_binary32", "pump_binary64", "many_binary32"])
+def test_module_compiles_with_warnings_as_errors(name: str, tmp_path: Path) -> None:
+    path = written(MODELS[name], tmp_path)
+    program = "import sys, pathlib; exec(compile(pathlib.Path(sys.argv[1]).read_text(), 'module', 'exec'))"
+    command = [sys.executable, "-I", "-W", "error", "-c", program, str(path)]
+    done = subprocess.run(command, capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stderr) == (0, "")
+
+
+# --- text from the plan ----------------------------------------------------------------------------------------------
+
+
+def tokens(text: str) -> list[tokenize.TokenInfo]:
+    return list(tokenize.generate_tokens(io.StringIO(text).readline))
+
+
+class Blanked(ast.NodeTransformer):
+    """Every string constant, the docstrings among them, becomes the same one."""
+
+    def visit_Constant(self, node: ast.Constant) -> ast.Constant:  # noqa: N802
+        return ast.Constant("") if isinstance(node.value, str) else node
+
+
+def shape(text: str) -> tuple[str, int]:
+    """The module's syntax tree without what its strings say, and the number of comments."""
+    comments = sum(token.type == tokenize.COMMENT for token in tokens(text))
+    return ast.dump(Blanked().visit(ast.parse(text))), comments
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+@pytest.mark.parametrize("text", HOSTILE, ids=range(len(HOSTILE)))
+def test_text_from_the_plan_stays_text(text: str, arithmetic: str, tmp_path: Path) -> None:
+    sealed = MODELS[f"pump_{arithmetic}"]
+    hostile = with_text(sealed, text)
+    test = self_test_of(hostile, make_vectors(hostile))
+    made, plain = (PYTHON.emit(model, test).decode("ascii") for model in (hostile, with_text(sealed, "plain")))
+    assert made.isascii()
+    assert not set(made) & {chr(code) for code in range(32) if code != 10}
+    assert shape(made) == shape(plain)
+    module = loaded(made)
+    assert not {"PLANTED", "os"} & set(module)
+    assert module["CLASSES"] == (text, text + "1")
+    assert module["INPUTS"][0][1] == text
+    assert text in module["__doc__"]
+    for run in PYTHON.run(written(hostile, tmp_path, made), hostile, [], False):
+        assert (run.trouble, run.self_test, run.model_id) == (None, 0, hostile.model_id)
+
+
+def test_numbers_that_are_not_finite_have_no_literal() -> None:
+    for value in (NAN, INFINITY):
+        with pytest.raises(ValueError, match="no literal stands for"):
+            lexical.number(value)
+
+
+def test_a_sum_that_could_leave_binary32_is_refused() -> None:
+    sealed = line_model("binary32")
+    term = replace(sealed.terms[0], weights=((2.0**125,),))
+    with pytest.raises(ReleaseError) as caught:
+        source(replace(sealed, terms=(term,)))
+    assert str(caught.value) == (
+        "line.py: a step of the log-odds can be too large for binary32 within the ranges; "
+        "narrow the ranges, or choose binary64"
+    )
+
+
+# --- the self-test ---------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", ["pump_binary32", "pump_binary64", "levels_only_binary32", "one_input_binary64"])
+def test_self_test_finds_every_number_off_by_one_bit(name: str) -> None:
+    """Every literal that stands once as an assignment or in a table of weights, moved to its neighbour."""
+    sealed = MODELS[name]
+    text = source(sealed)
+    tried = 0
+    for found in re.finditer(r"(?m)^(?:[A-Z_0-9]+ = |    )(-?[0-9][0-9.e+-]*)(?=$|,?  #)", text):
+        number = float(found[1])
+        other = next_to(number, INFINITY, sealed.arithmetic)
+        planted = text[: found.start(1)] + repr(other) + text[found.end(1) :]
+        if found[0].startswith(("NO_CALL", "FAULT")):
+            continue
+        tried += 1
+        assert loaded(planted)["self_test"]() == SELF_TEST_TABLES, found[0]
+    numbers = len(list(device_numbers(sealed))) - len(sealed.exponential.coefficients) - 2
+    assert tried == numbers
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+@pytest.mark.parametrize(
+    ("right", "wrong"),
+    [
+        ("if z >= THRESHOLD_HIGH", "if z > THRESHOLD_HIGH"),
+        ("t = -abs(z)", "t = -abs(z) - 1e-3"),
+        ("z + WEIGHTS_IMPELLER[int(x_impeller)]", "z - WEIGHTS_IMPELLER[int(x_impeller)]"),
+        ("x_suction <= HIGH_SUCTION:\n        return 1", "x_suction <= HIGH_FLOW:\n        return 1"),
+    ],
+)
+def test_self_test_finds_a_changed_step(arithmetic: str, right: str, wrong: str) -> None:
+    sealed = MODELS[f"pump_{arithmetic}"]
+    text = PYTHON.emit(sealed, replace(self_test_of(sealed, vectors := make_vectors(sealed)), vectors=vectors)).decode()
+    assert right in text
+    assert loaded(text)["self_test"]() == 0
+    assert loaded(text.replace(right, wrong))["self_test"]() >= SELF_TEST_VECTOR
+
+
+def test_self_test_names_the_vector() -> None:
+    sealed = MODELS["pump_binary32"]
+    test = self_test_of(sealed, make_vectors(sealed))
+    for position, vector in enumerate(test.vectors):
+        other = replace(vector, expected=replace(vector.expected, decision=vector.expected.decision + 1))
+        planted = (*test.vectors[:position], other, *test.vectors[position + 1 :])
+        module = loaded(PYTHON.emit(sealed, replace(test, vectors=planted)).decode())
+        assert module["self_test"]() == SELF_TEST_VECTOR + position
+
+
+class Short(float):
+    """A float of 22 significant bits, cut: what a build with 30-bit boxed floats keeps of binary32."""
+
+    def __radd__(self, other: float) -> float:
+        return Short(cut(float(other) + float(self), 22))
+
+    def __truediv__(self, other: float) -> float:
+        return Short(float(self) / float(other))
+
+
+def cut(x: float, bits: int) -> float:
+    fraction, exponent = math.frexp(x)
+    return math.ldexp(math.floor(math.ldexp(fraction, bits)), exponent - bits)
+
+
+def standing_in(**names: Any) -> Any:
+    """A module with these names."""
+    made = types.ModuleType("stand_in")
+    made.__dict__.update(names)
+    return made
+
+
+def with_modules(text: str, **modules: Any) -> dict[str, Any]:
+    """The generated module with other modules than Python's `math` and `struct`."""
+    names: dict[str, Any] = dict(modules)
+    exec(compile(text.replace("import math\nimport struct\n", ""), "generated.py", "exec"), names)
+    return names
+
+
+def test_self_test_finds_shorter_floats() -> None:
+    text = source(line_model("binary64"))
+    short = standing_in(ldexp=lambda x, k: Short(math.ldexp(x, k)))
+    assert with_modules(text, math=math, struct=struct)["self_test"]() == 0
+    assert with_modules(text, math=short, struct=struct)["self_test"]() == SELF_TEST_ROUNDING
+
+
+@pytest.mark.parametrize(
+    ("change", "code"),
+    [
+        (lambda x: x, 0),
+        (lambda x: cut(x, 22), SELF_TEST_ROUNDING),  # 30-bit boxed floats
+        (lambda x: cut(x, 24), SELF_TEST_ROUNDING),  # towards zero
+        (lambda x: -cut(-x, 24), SELF_TEST_ROUNDING),  # upwards
+        (lambda x: 0.0 if abs(x) < 2.0**-126 else x, SELF_TEST_SUBNORMALS),
+    ],
+)
+def test_self_test_finds_wrong_rounding_of_binary32(change: Any, code: int) -> None:
+    text = source(line_model("binary32"))
+    other = standing_in(pack=lambda layout, *xs: struct.pack(layout, *map(change, xs)), unpack=struct.unpack)
+    assert with_modules(text, math=math, struct=other)["self_test"]() == code
+
+
+# --- the runner ------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("planted", "trouble"),
+    [
+        ("import nothing_of_that_name\n", "ModuleNotFoundError: No module named 'nothing_of_that_name'"),
+        ("print('hello')\n", "printed what is no output: "),
+        ("raise SystemExit(3)\n", "ended with status 3"),
+        ("raise SystemExit(0)\n", "printed what is no output: "),
+        ("while True: pass\n", "did not end within 2 s"),
+        ("def log_odds(inputs): return 0.1\n", "printed what is no output: row 1: 0.1 is not a binary32 number"),
+        ("def decide(inputs): return None\n", "TypeError: int() argument must be"),
+    ],
+)
+def test_runner_says_what_broke(planted: str, trouble: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(runner, "TIME_LIMIT", 2.0)
+    sealed = line_model("binary32")
+    (run,) = PYTHON.run(written(sealed, tmp_path, source(sealed) + planted), sealed, [(4.0,)], False)
+    assert run.ran
+    assert run.trouble is not None
+    assert run.trouble.startswith(trouble)
+    assert run.outputs == ()
+
+
+def test_runner_finds_a_truncated_file(tmp_path: Path) -> None:
+    sealed = line_model("binary32")
+    text = source(sealed)
+    (run,) = PYTHON.run(written(sealed, tmp_path, text[: len(text) * 2 // 3]), sealed, [(4.0,)], False)
+    assert run.ran
+    assert run.trouble
+    assert run.trouble.startswith(("SyntaxError", "AttributeError", "IndentationError"))
+
+
+def test_runner_reads_id_and_self_test_from_the_module(tmp_path: Path) -> None:
+    sealed = line_model("binary32")
+    text = source(sealed).replace(f'MODEL_ID = "{sealed.model_id}"', 'MODEL_ID = "another"')
+    text += "def self_test(): return 7\n"
+    (run,) = PYTHON.run(written(sealed, tmp_path, text), sealed, [], False)
+    assert (run.model_id, run.self_test, run.trouble) == ("another", 7, None)
+
+
+def test_runner_leaves_nothing_beside_the_artefact(tmp_path: Path) -> None:
+    sealed = line_model("binary64")
+    path = written(sealed, tmp_path)
+    list(PYTHON.run(path, sealed, [(1.0,)], True))
+    assert list(tmp_path.iterdir()) == [path]
