@@ -52,8 +52,10 @@ class Effort:
     verified: int
 
 
-QUICK = Effort(uniform=20_000, corners=1_000, beams=4, width=24, branch=64, rounds=40, verified=8)
-THOROUGH = Effort(uniform=200_000, corners=4_000, beams=16, width=64, branch=128, rounds=200, verified=32)
+EFFORTS = {
+    "quick": Effort(uniform=20_000, corners=1_000, beams=4, width=24, branch=64, rounds=40, verified=8),
+    "thorough": Effort(uniform=200_000, corners=4_000, beams=16, width=64, branch=128, rounds=200, verified=32),
+}
 
 
 @dataclass(frozen=True)
@@ -97,12 +99,13 @@ class _State:
         return np.maximum(self.error + self.up, self.down - self.error)
 
 
-def attack(trained: TrainedModel, sealed: SealedModel, budget: Budget, seed: int, thorough: bool = False) -> Attack:
-    """Search for the largest |device log-odds - trained log-odds|: about half a second, or (thorough) a few seconds.
+def attack(trained: TrainedModel, sealed: SealedModel, budget: Budget, seed: int, effort: str) -> Attack:
+    """Search for the largest |device log-odds - trained log-odds|. effort: "quick" (half a second at most for 40
+    inputs) or "thorough" (a few seconds).
 
     A share above 1 means that the budget, or something that it relies on, is wrong.
     """
-    size = THOROUGH if thorough else QUICK
+    size = EFFORTS[effort]
     found: list[tuple[float, int, tuple[float, ...]]] = []
     tried = 0
     for k in range(len(sealed.intercepts)):
