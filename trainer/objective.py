@@ -63,6 +63,13 @@ def log_odds(columns: Array, theta: Array) -> Array:
     return z
 
 
+def value(objective: Objective, theta: Array) -> float:
+    """The negative log posterior at θ, but for a constant: Σ ω log(1 + exp t) + ½ Σ ((θ − m) / s)²."""
+    losses = np.logaddexp(0.0, objective.sides * log_odds(objective.columns, theta))
+    by_row = losses.sum() if objective.row_weights is None else losses @ objective.row_weights
+    return float(by_row + 0.5 * ((theta - objective.means) ** 2 @ objective.precisions))
+
+
 def slopes(z: Array, sides: Array, row_weights: Array | None) -> tuple[Array, Array]:
     """First and second derivative of each row's loss by its log-odds z."""
     growth = sides * z

@@ -6,7 +6,8 @@ Step rule. Along a step the second derivative φ″ changes by at most the facto
 log-odds (Bach, Electronic Journal of Statistics 4 (2010), section 2). So a Newton step with R <= 1 always descends:
 φ(1) − φ(0) <= −φ″(0) (1 − (e^R − 1 − R)/R²). It is taken whole. Any other step is shortened or stretched until the
 slope along it lies between minus half of what it was and zero, which for a convex function is descent with the
-curvature condition of Wolfe: convergence from any start. The search needs no further reading of the columns.
+curvature condition of Wolfe. The search needs no further reading of the columns. A start that is no better than zero
+gives way to zero, where every row has its full curvature: far out all of them can vanish in binary64.
 
 Last digits. Weights are multiples of 2^-30 (`grid`). Row order, threads, block sizes and libraries change the
 unrounded weights in their last bits, so a weight that lies near a midpoint of the grid is taken further with gradients
@@ -38,6 +39,7 @@ from trainer.objective import (
     log_odds,
     objective_of,
     slopes,
+    value,
 )
 
 Array = NDArray[np.float64]
@@ -106,9 +108,8 @@ def solve(
     weights.
     """
     objective = objective_of(columns, labels, row_weights, prior)
-    theta = np.zeros(columns.shape[1] + 1) if start is None else np.array(start, dtype=np.float64)
     with _threads.limit(limits=1, user_api="blas"), np.errstate(all="ignore"):
-        z = None
+        theta, z = _better_start(objective, start), None
         if size := sample_size(objective):
             near = _newton(sample(objective, size), theta, None, _SAMPLE_SETTLED, block_rows)
             if near is not None:
@@ -127,22 +128,29 @@ def solve(
     return _certified(theta, checked, covariance)
 
 
+def _better_start(objective: Objective, start: Array | None) -> Array:
+    zero = np.zeros(len(objective.means))
+    if start is None:
+        return zero
+    given = np.array(start, dtype=np.float64)
+    return given if value(objective, given) <= value(objective, zero) else zero
+
+
 def _newton(
     objective: Objective, theta: Array, z: Array | None, settled: float, block_rows: int
 ) -> tuple[Array, _Factor] | None:
     """Newton steps from any start until one changes no log-odds by more than `settled`; z are the log-odds of θ.
 
-    None where the slope vanishes together with the curvature, or is not settled after `_MOST_STEPS`.
+    None where the curvature vanishes along some weights, or nothing is settled after `_MOST_STEPS`.
     """
     if z is None:
         z = log_odds(objective.columns, theta)
     for _ in range(_MOST_STEPS):
         slope, hessian = gradient_and_hessian(objective, theta, z, block_rows=block_rows)
         factor = _factor(hessian)
-        safe = factor or _factor(_curvature_bound(objective, block_rows))
-        if safe is None:
+        if factor is None:
             return None
-        step = -safe.solve(slope)
+        step = -factor.solve(slope)
         reached = log_odds(objective.columns, theta + step)
         along = reached - z
         change = float(np.abs(along).max())
@@ -151,7 +159,7 @@ def _newton(
         if change <= _WHOLE_STEP:
             theta, z = theta + step, reached
             if change <= settled:
-                return None if factor is None else (theta, factor)
+                return theta, factor
         else:
             theta = theta + _search(objective, theta, step, z, along) * step
             z = log_odds(objective.columns, theta)
@@ -193,13 +201,6 @@ def _factor(hessian: Array) -> _Factor | None:
     return _Factor(lower, scaling)
 
 
-def _curvature_bound(objective: Objective, block_rows: int) -> Array:
-    """¼ Xᵀ Ω X + prior, no less than the Hessian anywhere (Böhning and Lindsay, Annals of the Institute of Statistical
-    Mathematics 40 (1988)): for a place so far out that the Hessian vanishes."""
-    level = np.zeros(len(objective.columns))
-    return gradient_and_hessian(objective, objective.means, level, block_rows=block_rows)[1]
-
-
 def _to_grid(objective: Objective, theta: Array, covariance: Array, block_rows: int) -> tuple[Array, Checked]:
     """θ on the grid and the gradient there; in pairs of doubles where the doubt about a weight reaches a midpoint.
 
@@ -221,7 +222,7 @@ def _to_grid(objective: Objective, theta: Array, covariance: Array, block_rows: 
             break
         theta = rounded + offset
     final = rounded + np.rint(offset / WEIGHT_STEP) * WEIGHT_STEP
-    if attempt:
+    if attempt >= _DOUBLE_STEPS:
         checked = checked_gradient(objective, final, block_rows=block_rows)
     return final, checked
 
