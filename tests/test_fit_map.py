@@ -27,6 +27,7 @@ from runtime_min.names import NAME_RULE
 from runtime_min.sealing import seal_request
 from runtime_min.validity import trained_problems
 from trainer import fit_map, fit_plan, read_plan, read_rows
+from trainer.arrays import _span
 from trainer.operate import held_out_results
 from trainer.request import request_of
 from trainer.split import held_out_rows
@@ -471,3 +472,14 @@ def test_level_that_no_fitted_row_has_is_named(tmp_path: Path) -> None:
     with pytest.raises(FitError) as caught:
         fit_plan(plan, replace(rows, values=values))
     assert '"impeller=open"' in str(caught.value)
+
+
+@pytest.mark.parametrize("shape", [(1, 1), (511, 1), (513, 1), (5000, 3), (2049, 700)])
+def test_witness_limits_are_the_least_and_largest_of_each_column(shape: tuple[int, int]) -> None:
+    """NumPy's own reduction is the reference; NaN must show in either."""
+    values = np.random.default_rng(shape[0]).normal(size=shape)
+    low, high = _span(values)
+    assert low.tolist() == values.min(axis=0).tolist()
+    assert high.tolist() == values.max(axis=0).tolist()
+    values[-1, -1] = math.nan
+    assert [math.isnan(end[-1]) for end in _span(values)] == [True, True]

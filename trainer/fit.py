@@ -121,7 +121,11 @@ def _fit(
 ) -> TrainedModel:
     columns = columns_of(inputs)
     matrix = design_matrix(columns, values)
-    problems = judge(matrix, labels, row_weights, prior, [column.name for column in columns], classes)
+    judged = prior
+    if math.inf not in prior.sds and math.isinf(prior.intercept_sd):
+        # With a finite sd of every weight, two classes that have rows determine a flat intercept: judge need not try.
+        judged = replace(prior, intercept_sd=1.0)
+    problems = judge(matrix, labels, row_weights, judged, [column.name for column in columns], classes)
     if problems:
         raise FitError(problems)
     standardised = standardise(matrix, row_weights, [column.form == "value" for column in columns])
