@@ -286,7 +286,7 @@ def tokens(text: str) -> list[tokenize.TokenInfo]:
 class Blanked(ast.NodeTransformer):
     """Every string constant, the docstrings among them, becomes the same one."""
 
-    def visit_Constant(self, node: ast.Constant) -> ast.Constant:  # noqa: N802
+    def visit_Constant(self, node: ast.Constant) -> ast.Constant:
         return ast.Constant("") if isinstance(node.value, str) else node
 
 

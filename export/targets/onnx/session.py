@@ -21,6 +21,9 @@ def main() -> None:
         said: dict[str, Any] = {"version": version, "model_id": None, "trouble": None}
         try:
             onnx.checker.check_model(asked["model"], full_check=True)
+            said["numbers"] = {
+                tensor.name: tensor.raw_data.hex() for tensor in onnx.load(asked["model"]).graph.initializer
+            }
             session = open_session(onnxruntime, asked["model"], way)
             said["model_id"] = session.get_modelmeta().custom_metadata_map.get("model_id")
             results = score(session, rows, way["one_at_a_time"])
