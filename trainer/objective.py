@@ -77,7 +77,7 @@ def slopes(z: Array, sides: Array, row_weights: Array | None) -> tuple[Array, Ar
     np.exp(np.minimum(growth, _LARGEST_EXPONENT, out=growth), out=growth)  # exp(−t)
     share = 1.0 / (1.0 + growth)  # expit(t)
     weighted = share if row_weights is None else share * row_weights
-    return weighted * sides, weighted * share * growth
+    return weighted * sides, weighted * (share * growth)
 
 
 def gradient(objective: Objective, theta: Array, *, block_rows: int = BLOCK_ROWS) -> tuple[Array, Array]:

@@ -45,7 +45,8 @@ from trainer.objective import (
 Array = NDArray[np.float64]
 
 _WHOLE_STEP = 1.0  # R up to which a Newton step is taken whole
-_SETTLED = 1e-5  # R after which the Hessian at hand is the optimum's to less than this relative error
+_SETTLED = 1e-9  # R after which the Hessian at hand is the optimum's to less than this relative error
+_SETTLED_MANY = 1e-5  # the same for many rows, where one more Hessian costs a quarter of the fit
 _APPROACHED = 3e-5  # R of an approaching step after which one Newton step settles
 _SAMPLE_SETTLED = 0.1  # the optimum of a sample is farther than that from the optimum of all rows
 _MOST_STEPS = 200
@@ -109,12 +110,13 @@ def solve(
     """
     objective = objective_of(columns, labels, row_weights, prior)
     with _threads.limit(limits=1, user_api="blas"), np.errstate(all="ignore"):
-        theta, z = _better_start(objective, start), None
+        theta, z, settled = _better_start(objective, start), None, _SETTLED
         if size := sample_size(objective):
             near = _newton(sample(objective, size), theta, None, _SAMPLE_SETTLED, block_rows)
+            settled = _SETTLED_MANY
             if near is not None:
                 theta, z = approach(objective, near[0], near[1].solve, _APPROACHED, block_rows)
-        found = _newton(objective, theta, z, _SETTLED, block_rows)
+        found = _newton(objective, theta, z, settled, block_rows)
         if found is None:
             raise FitError(
                 Problem(
