@@ -18,6 +18,9 @@ Labels = npt.NDArray[np.int64]
 LEAST_SD = 1e-4
 """Weights are kept in steps of 2^-30; a narrower prior would be lost in them."""
 
+LARGEST = 2.0**1000
+"""Differences and sums of numbers up to this do not overflow."""
+
 MOST_NAMED = 5
 _BLOCK_ROWS = 2048  # rows that are read at once
 _WIDE = 512  # numbers in a row that NumPy reduces fast
@@ -132,6 +135,10 @@ def _row_weights(row_weights: npt.ArrayLike, rows: int, problems: list[Problem])
     elif (weights < 0).any():
         place = f"row_weights[{int(np.argmax(weights < 0))}]"
         problems.append(Problem(place, f"found {float(weights.min()):g}", "give weights of 0 or more"))
+    elif not float(weights.max()) * len(weights) <= LARGEST:
+        place = f"row_weights[{int(np.argmax(weights))}]"
+        found_weight = f"found {float(weights.max()):g}, too large to be summed"
+        problems.append(Problem(place, found_weight, "scale them all down"))
     elif not weights.any():
         problems.append(Problem("row_weights", "found only zeros", "give some rows a weight"))
     return weights

@@ -21,7 +21,7 @@ from runtime_min.model import (
     TrainedTerm,
 )
 from runtime_min.sealing import round_to
-from trainer.arrays import read_arrays
+from trainer.arrays import LARGEST, read_arrays
 from trainer.design import columns_of, design_matrix, typical_value, with_typical
 from trainer.judge import judge
 from trainer.objective import Prior
@@ -119,15 +119,22 @@ def _fit(
     limits: Sequence[tuple[float, float]],
     counts: FittedRows,
 ) -> TrainedModel:
+    problems = [
+        Problem(f'input "{entry.name}"', f"found numbers as large as {max(map(abs, ends)):g}", "take a larger unit")
+        for entry, ends in zip(inputs, limits, strict=True)
+        if max(map(abs, ends)) > LARGEST
+    ]
+    if problems:
+        raise FitError(problems)
     columns = columns_of(inputs)
     matrix = design_matrix(columns, values)
     judged = prior
     if math.inf not in prior.sds and math.isinf(prior.intercept_sd):
         # With a finite sd of every weight, two classes that have rows determine a flat intercept: judge need not try.
         judged = replace(prior, intercept_sd=1.0)
-    problems = judge(matrix, labels, row_weights, judged, [column.name for column in columns], classes)
-    if problems:
-        raise FitError(problems)
+    reasons = judge(matrix, labels, row_weights, judged, [column.name for column in columns], classes)
+    if reasons:
+        raise FitError(reasons)
     standardised = standardise(matrix, row_weights, [column.form == "value" for column in columns])
     solution = solve(standardised.columns, labels, row_weights, prior)
     terms = tuple(
