@@ -213,7 +213,7 @@ def _first_other(have: str, want: str) -> str:
 def _reference(sealed: SealedModel, on_file: Sequence[Vector], path: Path) -> Check:
     """The vectors on file against the reference scorer, and against the rows that this model must be tried on."""
     wrong = [row for row, vector in enumerate(on_file) if vectors.expected(sealed, vector.inputs) != vector.expected]
-    found = f"the reference scorer gives the bits of all {len(on_file)} rows"
+    found = f"{len(on_file)} rows, the same bits"
     if wrong:
         found = f"line {wrong[0] + 2} ({on_file[wrong[0]].kind}) is not what the reference scorer gives"
     return _judged(path.name, "reference scorer", len(wrong), found)
@@ -231,13 +231,13 @@ def _budget(
     over = tolerance is not None and not budget.log_odds <= Fraction(tolerance)
     bound = f"{float(budget.log_odds):.3g}"
     allowed = f"tolerance {float(Fraction(tolerance)):.3g}" if tolerance is not None else "no tolerance stated"
-    checks = [_judged(name, "error budget", int(over), f"{bound} in log-odds, {allowed}")]
+    checks = [_judged(name, "error budget", int(over), f"{bound}, {allowed}")]
     found = attack(trained, sealed, budget, int(sealed.model_id, 16), "thorough" if thorough else "quick")
     broken = not found.share <= 1
-    sentence = f"worst error found {float(found.worst):.3g}, {found.share:.0%} of the bound, in {found.tried:,} rows"
+    sentence = f"{found.tried:,} rows, at worst {found.share:.0%} of the bound"
     checks.append(_judged(name, "attack on the budget", int(broken), sentence))
     seen = witness_misses(trained, sealed, budget)
-    sentence = f"{seen.compared} rows within budget and bound, the nearest at {seen.largest:.0%} of what is allowed"
+    sentence = f"{seen.compared} rows, at worst {seen.largest:.0%} of what is allowed"
     if seen.rows:
         sentence = f"{len(seen.rows)} of {seen.compared} rows off: row {seen.rows[0] + 1} is the first"
     elif not seen.compared:

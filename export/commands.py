@@ -178,10 +178,10 @@ def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
 
     source = Source(plan.rows.file, plan.rows.label, plan.rows.held_out, plan.rows.seed)
     found = recheck_fit(trained, sealed.about.request, source)
-    held = f"{found.rows:,} raw rows give these centres, scales and optimum (within {found.step:.1e} posterior sd)"
+    held = f"{found.rows:,} rows, within {found.step:.1e} posterior sd"
     sentence = "; ".join(found.problems) or held
     name, wrong = f"{plan.model}.trained.json", len(found.problems)
-    return Check(name, "optimality from raw rows", True, not wrong, wrong, sentence)
+    return Check(name, "optimum of the raw rows", True, not wrong, wrong, sentence)
 
 
 def _unchecked(request: argparse.Namespace) -> tuple[str, ...]:

@@ -11,54 +11,47 @@ from export.check import Check, Report
 from runtime_min.model import SealedModel, TrainedModel
 
 WIDTH = 80
-_INDENT = 12
+_INDENT = 10
 
 
 def _line(title: str, text: str) -> str:
     """A title in the margin, the text beside it, folded at 80 columns."""
-    return textwrap.fill(
-        text,
-        WIDTH,
-        initial_indent=f"{title:<{_INDENT}}",
-        subsequent_indent=" " * _INDENT,
-        break_long_words=False,
-        break_on_hyphens=False,
-    )
+    return _folded(f"{title:<{_INDENT}}{text}", _INDENT)
+
+
+def _folded(text: str, indent: int) -> str:
+    return textwrap.fill(text, WIDTH, subsequent_indent=" " * indent, break_long_words=False, break_on_hyphens=False)
 
 
 def fit_lines(trained: TrainedModel) -> list[str]:
     """What was fitted, and how it does on the rows that were never fitted."""
     rows, certificate = trained.rows, trained.certificate
-    shares = " · ".join(
-        f"{weight:,.10g} {name}" for name, weight in zip(trained.classes, trained.class_weights, strict=True)
-    )
+    classes = zip(trained.class_weights, trained.classes, strict=True)
+    shares = ", ".join(f"{weight:,.10g} {name}" for weight, name in classes)
     dropped = f", {rows.dropped:,} dropped for a missing value" if rows.dropped else ""
     lines = [
         _line("rows", f"{rows.total:,} read{dropped}, {rows.fitted:,} fitted ({shares}), {rows.held_out:,} held out"),
+        _line("fit", f"{len(trained.terms)} terms, within {certificate.distance:.1e} posterior sd of the optimum"),
         _line(
-            "fit",
-            f"{len(trained.terms)} terms; gradient {certificate.gradient:.1e} of its terms, Newton decrement "
-            f"{certificate.newton_decrement:.1e}, within {certificate.distance:.1e} posterior sd of the optimum",
+            "",
+            f"(gradient {certificate.gradient:.1e} of its terms, Newton decrement {certificate.newton_decrement:.1e})",
         ),
     ]
     held = trained.held_out
     if held is None:
-        lines.append(_line("held out", "no rows: nothing says how the model does on rows it has not seen"))
-        return lines
-    auc = "not defined (one class)" if held.auc is None else f"{held.auc:.3f} (chance 0.500)"
-    lines.append(
-        _line(
-            "held out",
-            f"log loss {held.log_loss:.4f} (base rate {held.base_log_loss:.4f}), Brier {held.brier:.4f} "
-            f"({held.base_brier:.4f}), area under ROC {auc}",
-        )
-    )
-    return lines
+        return [*lines, _line("held out", "no rows: nothing says how the model does on rows it has not seen")]
+    table = [
+        ("log loss", f"{held.log_loss:.4f}", f"{held.base_log_loss:.4f}"),
+        ("Brier score", f"{held.brier:.4f}", f"{held.base_brier:.4f}"),
+        ("area under ROC", "none" if held.auc is None else f"{held.auc:.4f}", "0.5000"),
+    ]
+    lines.append(f"{'held out':<{_INDENT}}{'':<18}{'model':<10}base rate {held.base_rate:.4f}")
+    return [*lines, *(f"{'':<{_INDENT}}{what:<18}{model:<10}{base}" for what, model, base in table)]
 
 
 def model_line(sealed: SealedModel) -> str:
     """The model's name, id and arithmetic."""
-    return _line("model", f"{sealed.name} {sealed.model_id}, {sealed.arithmetic}")
+    return f"{sealed.name} {sealed.model_id}, {sealed.arithmetic}"
 
 
 def check_lines(report: Report) -> list[str]:
@@ -66,30 +59,28 @@ def check_lines(report: Report) -> list[str]:
     lines = []
     if report.budget is not None:
         allowed = "none stated" if report.tolerance is None else f"{float(report.tolerance):.3g}"
-        text = f"log-odds off by at most {_up(float(report.budget.log_odds))} (tolerance {allowed})"
-        if report.attack is not None:
-            text += f"; worst found {float(report.attack.worst):.3g}, {report.attack.share:.0%} of the bound"
-        lines.append(_line("budget", text))
-    lines += [_check_line(entry, report.accepted) for entry in report.checks]
+        bound = _up(float(report.budget.log_odds))
+        lines.append(_line("budget", f"log-odds off by at most {bound}, tolerance {allowed}"))
+    if report.attack is not None:
+        worst, share = float(report.attack.worst), report.attack.share
+        lines.append(_line("", f"worst error found {worst:.3g}, {share:.0%} of that bound"))
+    lines += ["", *(_check_line(entry, report.accepted) for entry in report.checks), ""]
     failed = [entry for entry in report.checks if entry.ran and not entry.ok]
     missing = [entry for entry in report.checks if not entry.ran and entry.target not in report.accepted]
-    if report.ok:
-        verdict = f"all {len(report.checks)} checks hold"
-        if report.release is not None:
-            verdict += f": {report.release}"
-        return [*lines, _line("release", verdict)]
-    counts = []
+    counts = [f"all {len(report.checks)} checks hold"] if report.ok else []
     if failed:
         counts.append(f"{len(failed)} of {len(report.checks)} checks failed")
     if missing:
-        counts.append(f"{len(missing)} could not run")
+        counts.append(f"{len(missing)} of {len(report.checks)} could not run")
     where = "nothing was written" if report.release is None else report.release
     return [*lines, _line("release", f"{', '.join(counts)}: {where}")]
 
 
 def _check_line(entry: Check, accepted: tuple[str, ...]) -> str:
-    mark = "ok" if entry.ok else "FAILED" if entry.ran else "not run" if entry.target in accepted else "NOT RUN"
-    return _line(mark, f"{entry.artefact}, {entry.what}: {entry.found}")
+    mark = "ok" if entry.ok else "FAILED" if entry.ran else "unrun" if entry.target in accepted else "NOT RUN"
+    label = entry.artefact.removesuffix(".json").rpartition(".")[2] if entry.artefact.endswith(".json") else None
+    label = label or (f".{entry.artefact.rpartition('.')[2]}" if entry.target else entry.artefact)
+    return _folded(f"{mark:<8}{label:<13}{entry.what}: {entry.found}", 21)
 
 
 def _up(value: float) -> str:

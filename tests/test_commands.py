@@ -49,7 +49,7 @@ def test_ship_prints_what_a_reader_needs_within_80_columns(tmp_path: Path) -> No
     assert (result.returncode, result.stderr) == (0, "")
     sealed = load(tmp_path / "release" / "pump_cavitation.sealed.json")
     shown = " ".join(result.stdout.split())
-    told = ("3,000 read", "log loss", "base rate", "Brier", "area under ROC", "budget", "worst found", "checks hold")
+    told = ("3,000 read", "log loss", "base rate", "Brier", "area under ROC", "worst error found", "checks hold")
     assert [text for text in (sealed.model_id, *told) if text not in shown] == []
     assert [line for line in result.stdout.splitlines() if len(line) > 80 and str(tmp_path) not in line] == []
 
