@@ -1,8 +1,9 @@
 """Runs the graph in ONNX Runtime, in a process of its own: a damaged graph can stop that, and no more.
 
-Each way of running is judged on all rows; in each, a batch of none and a batch of one must work too. A graph cannot
-test itself, so the runner stands in for one part: where a number in the file is not the sealed model's, the self-test
-is SELF_TEST_TABLES, even if no row shows it; otherwise there is none.
+First the checker of the onnx package must take the file, shapes and types included. Each way of running is judged on
+all rows; in each, a batch of none and a batch of one must work too. A graph cannot test itself, so the runner stands in
+for one part: where a number in the file is not the sealed model's, the self-test is SELF_TEST_TABLES, even if no row
+shows it; otherwise there is none.
 """
 
 from __future__ import annotations
@@ -17,9 +18,12 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+import onnx
+from onnx import ModelProto
 
 from export.targets import SELF_TEST_TABLES, Output, Run
 from export.targets.onnx.emit import model
+from export.targets.onnx.session import short
 from runtime_min.arithmetic import raw_bits
 from runtime_min.model import SealedModel
 
@@ -57,6 +61,13 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
     if importlib.util.find_spec("onnxruntime") is None:
         yield Run("ONNX Runtime", False, "ONNX Runtime is not installed: pip install onnxruntime", None, None, ())
         return
+    try:
+        graph = onnx.load(artefact)
+        onnx.checker.check_model(graph, full_check=True)
+    except Exception as error:  # the parser's, the checker's and the shape inference's own kinds
+        yield Run("onnx.checker", True, short(str(error)) or type(error).__name__, None, None, ())
+        return
+    code = None if _numbers(graph) == _numbers(model(sealed)) else SELF_TEST_TABLES
     element = ELEMENT[sealed.arithmetic]
     with np.errstate(over="ignore"):
         table = np.array(rows, dtype=element).reshape(len(rows), len(sealed.inputs))
@@ -83,10 +94,14 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
         if position >= len(printed):
             yield Run(what, True, trouble, None, None, ())
             return
-        yield _read(what, sealed, json.loads(printed[position]), len(rows))
+        yield _read(what, sealed, json.loads(printed[position]), len(rows), code)
 
 
-def _read(what: str, sealed: SealedModel, said: dict[str, Any], count: int) -> Run:
+def _numbers(graph: ModelProto) -> dict[str, bytes]:
+    return {tensor.name: tensor.raw_data for tensor in graph.graph.initializer}
+
+
+def _read(what: str, sealed: SealedModel, said: dict[str, Any], count: int, code: int | None) -> Run:
     what = f"{what}, {said['version']}"
     if said["trouble"] is not None:
         return Run(what, True, said["trouble"], said["model_id"], None, ())
@@ -102,6 +117,4 @@ def _read(what: str, sealed: SealedModel, said: dict[str, Any], count: int) -> R
         )
         for row in range(count)
     )
-    numbers = {tensor.name: tensor.raw_data.hex() for tensor in model(sealed).graph.initializer}
-    code = None if said["numbers"] == numbers else SELF_TEST_TABLES
     return Run(what, True, None, said["model_id"], code, outputs)
