@@ -20,7 +20,7 @@ def blocks(language: str) -> list[str]:
 
 
 def masked(text: str) -> str:
-    """Without what differs between machines: versions, the compilers that are there, line ends, last digits of a fit."""
+    """Without what differs between machines: versions, compilers, line ends, last digits of a fit."""
     kept = [line for line in re.sub(r"\n {10,}", " ", text).splitlines() if not re.match(r"ok +\.h ", line)]
     return re.sub(r"\d+\.\d+(\.\d+)?|\d\.\de-\d\d|all \d+ checks", "#", "\n".join(kept))
 
