@@ -215,11 +215,16 @@ def _two_product(a: np.floating[Any], b: Floats) -> tuple[Floats, Floats]:
     p = a * b
     if b.dtype == np.float32:
         return p, p.astype(np.float64) - np.float64(a) * b.astype(np.float64)
-    split = np.float64(2**27 + 1)
-    a_high = split * a - (split * a - a)
-    b_high = split * b - (split * b - b)
+    a_high, b_high = _upper_half(np.atleast_1d(a)), _upper_half(b)
     a_low, b_low = a - a_high, b - b_high
     return p, -(a_low * b_low - (((p - a_high * b_high) - a_low * b_high) - a_high * b_low))
+
+
+def _upper_half(x: Floats) -> Floats:
+    """The upper 26 bits of binary64 numbers; very large ones are made smaller on the way, so that nothing overflows."""
+    scale = np.where(np.abs(x) > 2.0**990, 2.0**-40, 1.0)
+    wide = (x * scale) * (2.0**27 + 1)
+    return (wide - (wide - x * scale)) / scale
 
 
 # --- candidates -------------------------------------------------------------------------------------------------------

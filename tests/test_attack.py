@@ -57,6 +57,16 @@ def test_attack_finds_the_worst_of_all_inputs_of_a_narrow_range() -> None:
     assert attack(trained, sealed, derive(trained, sealed), seed=3, effort="quick").worst >= worst
 
 
+@pytest.mark.parametrize(
+    ("low", "high", "arithmetic"),
+    [("-1e300", "3e307", "binary64"), ("1e-310", "5e-300", "binary64"), ("-1e37", "3e38", "binary32")],
+)
+def test_attack_works_at_the_ends_of_the_arithmetic(low: str, high: str, arithmetic: str) -> None:
+    trained, sealed = line(low, high, weight=0.3, arithmetic=arithmetic)
+    found = attack(trained, sealed, derive(trained, sealed), seed=1, effort="quick")
+    assert 0.5 <= found.share <= 1
+
+
 def test_same_seed_gives_the_same_result_and_another_seed_another_search() -> None:
     trained, sealed = SAMPLES["pump_binary32"]
     budget = derive(trained, sealed)

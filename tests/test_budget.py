@@ -196,6 +196,20 @@ def test_product_with_a_power_of_two_is_exact_until_it_underflows() -> None:
     assert product_rounding("binary32", Fraction(3, 2**100), Interval(two(-149), two(-140))) == two(-150)
 
 
+def test_sum_is_exact_below_twice_the_smallest_normal_number_and_not_above() -> None:
+    # Multiples of 2^-149 below 2^-125 fit in 24 bits; 2^-125 + 2^-149 lies half-way between two binary32 numbers.
+    assert sum_rounding("binary32", Interval(Fraction(0), two(-125))) == 0
+    assert sum_rounding("binary32", Interval(Fraction(0), two(-125) + two(-149))) == two(-149)
+
+
+def test_subtraction_just_outside_the_range_of_sterbenz_loses_one_bit() -> None:
+    # 13/32 + 2^-25 less 5/4 has 25 significant bits: below 1/2 inputs have units of 2^-25, the difference of 2^-24.
+    limits = Interval(Fraction(13, 32), Fraction(19, 32))
+    assert difference_rounding("binary32", limits, Fraction(5, 4)) == two(-25)
+    # Between 1/2 and 19/32 both have units of 2^-24.
+    assert difference_rounding("binary32", Interval(Fraction(1, 2), Fraction(19, 32)), Fraction(5, 4)) == 0
+
+
 # --- never exceeded ---------------------------------------------------------------------------------------------------
 
 
