@@ -52,8 +52,14 @@ def judge(
     problems += _missing_classes(labels, class_names)
     if len(labels):
         problems += _constant_columns(values, names)
-    if problems or not _any_flat(prior):
+    if problems or math.inf not in prior.sds:  # a flat intercept alone needs no more than both classes
         return tuple(problems)
+    sample = _sample(labels)
+    if len(sample) < len(labels):  # where some rows have an answer, more rows cannot take it away
+        some = None if row_weights is None else row_weights[sample]
+        columns = standardise(values[sample], some, [True] * values.shape[1]).columns
+        if not _dependent_columns(columns, prior, names) and _settles(columns, labels[sample], some, prior):
+            return ()
     columns = standardise(values, row_weights, [True] * values.shape[1]).columns
     problems += _dependent_columns(columns, prior, names)
     if not problems and not _settles(columns, labels, row_weights, prior):
@@ -136,12 +142,8 @@ def _constant_columns(values: Array, names: Sequence[str]) -> list[Problem]:
     ]
 
 
-def _any_flat(prior: Prior) -> bool:
-    return math.inf in prior.sds or prior.intercept_sd == math.inf
-
-
 def _dependent_columns(columns: Array, prior: Prior, names: Sequence[str]) -> list[Problem]:
-    """Pivoted Cholesky of the flat columns' Gram matrix: a pivot near zero is a column that the others make up."""
+    """Columns that those before them make up, found in the flat columns' Gram matrix."""
     flat = np.flatnonzero(np.isinf(prior.sds))
     if not len(flat):
         return []
@@ -158,16 +160,25 @@ def _dependent_columns(columns: Array, prior: Prior, names: Sequence[str]) -> li
     gram = chosen.T @ chosen / len(columns)
     size = np.sqrt(np.diagonal(gram))
     size[size == 0.0] = 1.0
-    lower, order, rank, _ = lapack.dpstrf(gram / size / size[:, np.newaxis], tol=_DEPENDENT, lower=1)
+    gram = gram / size / size[:, np.newaxis]
+    if lapack.dpstrf(gram, tol=_DEPENDENT, lower=1)[2] == len(flat):  # its rank, by Cholesky with pivots
+        return []
     problems = []
-    order = order - 1
-    for place in range(rank, len(flat)):
-        share = solve_triangular(lower[:rank, :rank], lower[place, :rank], lower=True, trans="T")
-        makers = [names[flat[order[index]]] for index in np.flatnonzero(np.abs(share) > _SAME)]
+    free: list[int] = []
+    lower = np.zeros((0, 0))
+    for place, column in enumerate(flat.tolist()):
+        across = solve_triangular(lower, gram[free, place], lower=True)
+        left = float(gram[place, place] - across @ across)
+        if left > _DEPENDENT:
+            lower = np.block([[lower, np.zeros((len(free), 1))], [across, np.sqrt(left)]])
+            free.append(place)
+            continue
+        share = solve_triangular(lower, across, lower=True, trans="T")
+        makers = [names[flat[free[index]]] for index in np.flatnonzero(np.abs(share) > _SAME).tolist()]
         told = f"repeats column {_quoted(makers)}" if len(makers) == 1 else f"a sum of multiples of {_quoted(makers)}"
         problems.append(
             Problem(
-                f'rows: column "{names[flat[order[place]]]}"',
+                f'rows: column "{names[column]}"',
                 f"{told}, which a flat prior cannot tell apart",
                 "remove it, or give these columns a prior with a finite sd",
             )
@@ -176,22 +187,20 @@ def _dependent_columns(columns: Array, prior: Prior, names: Sequence[str]) -> li
 
 
 def _settles(columns: Array, labels: Labels, row_weights: Array | None, prior: Prior) -> bool:
-    """Whether a fit ends. If one of a sample of the rows ends, so does one of all rows: more rows only overlap more."""
-    sample = np.concatenate([_spread(np.flatnonzero(labels == index)) for index in (0, 1)])
-    for rows in (sample, slice(None)):
-        try:
-            solve(columns[rows], labels[rows], None if row_weights is None else row_weights[rows], prior)
-        except FitError:
-            continue
-        return True
-    return False
+    try:
+        solve(columns, labels, row_weights, prior)
+    except FitError:
+        return False
+    return True
 
 
-def _spread(rows: NDArray[np.intp]) -> NDArray[np.intp]:
-    """At most `_SAMPLE_ROWS` of them, drawn with a fixed seed; the choice decides nothing but the time taken."""
-    if len(rows) <= _SAMPLE_ROWS:
-        return rows
-    return np.sort(np.random.default_rng(0).choice(rows, _SAMPLE_ROWS, replace=False))
+def _sample(labels: Labels) -> NDArray[np.intp]:
+    """At most `_SAMPLE_ROWS` rows of each class, drawn with a fixed seed; they decide nothing but the time taken."""
+    draws = np.random.default_rng(0)
+    parts = [np.flatnonzero(labels == index) for index in (0, 1)]
+    return np.concatenate(
+        [rows if len(rows) <= _SAMPLE_ROWS else draws.choice(rows, _SAMPLE_ROWS, replace=False) for rows in parts]
+    )
 
 
 def _quoted(names: Sequence[str]) -> str:
