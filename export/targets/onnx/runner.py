@@ -81,20 +81,21 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
         "ways": [asdict(way) for way in ways],
     }
     command = [sys.executable, "-I", "-B", str(Path(__file__).with_name("session.py"))]
-    trouble = "ended without a result"
     try:
-        done = subprocess.run(command, input=json.dumps(asked), capture_output=True, text=True, timeout=TIME_LIMIT)
-        printed = done.stdout.splitlines()
-        trouble = (done.stderr.strip().splitlines() or [f"ended with status {done.returncode}"])[-1]
+        done = subprocess.run(command, input=json.dumps(asked).encode(), capture_output=True, timeout=TIME_LIMIT)
+        printed = done.stdout
+        last = done.stderr.decode(errors="replace").strip().splitlines()[-1:]
+        trouble = short(last[0]) if last else f"ended with status {done.returncode}"
     except subprocess.TimeoutExpired as late:
-        printed = (late.stdout or b"").decode(errors="replace").splitlines() if isinstance(late.stdout, bytes) else []
+        printed = late.stdout or b""
         trouble = f"did not end within {TIME_LIMIT:g} s"
+    lines = printed.split(b"\n")[:-1]  # what follows the last line end was cut off
     for position, way in enumerate(ways):
         what = f"ONNX Runtime, {way.what}"
-        if position >= len(printed):
+        if position >= len(lines):
             yield Run(what, True, trouble, None, None, ())
             return
-        yield _read(what, sealed, json.loads(printed[position]), len(rows), code)
+        yield _read(what, sealed, json.loads(lines[position]), len(rows), code)
 
 
 def _numbers(graph: ModelProto) -> dict[str, bytes]:

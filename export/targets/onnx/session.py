@@ -30,8 +30,8 @@ def main() -> None:
 
 
 def short(text: str) -> str:
-    """A message on one line, cut where it runs on."""
-    return " ".join(text.split())[:400]
+    """A message on one line, cut where it runs on, without characters that act on a terminal."""
+    return "".join(character if character.isprintable() else "?" for character in " ".join(text.split())[:400])
 
 
 def open_session(onnxruntime: Any, model: str, way: dict[str, Any]) -> Any:

@@ -51,18 +51,20 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
         command = [sys.executable, "-I", "-S", "-B", *options, "-c", SCRIPT, str(artefact), sealed.name, numbers]
         what = f"{what}, {sys.version_info.major}.{sys.version_info.minor}"
         try:
-            done = subprocess.run(command, input=asked, capture_output=True, text=True, timeout=TIME_LIMIT)
+            done = subprocess.run(
+                command, input=asked, capture_output=True, encoding="utf-8", errors="replace", timeout=TIME_LIMIT
+            )
         except subprocess.TimeoutExpired:
             yield Run(what, True, f"did not end within {TIME_LIMIT:g} s", None, None, ())
             continue
         if done.returncode != 0:
             last = (done.stderr.strip().splitlines() or [f"ended with status {done.returncode}"])[-1]
-            yield Run(what, True, last, None, None, ())
+            yield Run(what, True, _printable(last), None, None, ())
             continue
         try:
             yield _read(what, sealed, done.stdout, len(rows))
         except ValueError as error:
-            yield Run(what, True, f"printed what is no output: {error}", None, None, ())
+            yield Run(what, True, f"printed what is no output: {_printable(str(error))}", None, None, ())
 
 
 def _read(what: str, sealed: SealedModel, printed: str, count: int) -> Run:
@@ -90,3 +92,8 @@ def _bits_of(text: str, arithmetic: str, row: int) -> int:
 
 def _bits64(x: float) -> int:
     return raw_bits(float(x), "binary64")
+
+
+def _printable(text: str) -> str:
+    """An artefact's own words, cut, and without characters that act on a terminal."""
+    return "".join(character if character.isprintable() else "?" for character in text[:400])
