@@ -15,8 +15,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 from functools import cached_property
 
-ARITHMETICS = ("binary64", "binary32")
-"""How a target computes. Integers (int16, int32) join here when their scorer exists."""
+FLOATS = ("binary64", "binary32")
+INTEGERS = ("int16", "int32")
+ARITHMETICS = FLOATS
+"""How a target computes."""
 
 FAULT = -2
 NO_CALL = -1
@@ -71,6 +73,28 @@ class TrainedPrior:
 
 
 @dataclass(frozen=True)
+class Strength:
+    """One strength of the prior that was tried: its sd and what it gave on the folds left out of each fit.
+
+    `log_loss`: mean over the rows; `standard_error`: of that mean, over the folds.
+    """
+
+    sd: float
+    log_loss: float
+    standard_error: float
+
+
+@dataclass(frozen=True)
+class Choice:
+    """How the prior's sd was chosen: the method, the number of folds, and the whole curve, weakest prior last."""
+
+    method: str
+    folds: int
+    sd: float
+    strengths: tuple[Strength, ...]
+
+
+@dataclass(frozen=True)
 class Certificate:
     """Proof of optimality, at the weights as stored.
 
@@ -85,7 +109,10 @@ class Certificate:
 
 @dataclass(frozen=True)
 class FittedRows:
-    """How many rows there were, how many were dropped for a missing value, fitted, held out; SHA-256 of their file."""
+    """How many rows there were, how many were dropped for a missing value, fitted, held out; SHA-256 of their file.
+
+    Of several files it is the SHA-256 of their digests' lines, in the order of their names.
+    """
 
     total: int
     dropped: int
@@ -119,7 +146,12 @@ class Witness:
 
 @dataclass(frozen=True)
 class TrainedModel:
-    """What the rows said. `covariance` is the posterior's, intercept first, (1 + terms) squared (two classes)."""
+    """What the rows said. `covariance` is the posterior's, intercept first, (1 + terms) squared (two classes).
+
+    `prevalence`: the event's share in the field where the plan states one (an exact text). Sealing then shifts the
+    intercept by logit(prevalence) - logit(share of the event among the fitted rows), and the witness includes that
+    shift; the scores and the held-out results do not.
+    """
 
     inputs: tuple[TrainedInput, ...]
     classes: tuple[str, ...]
@@ -132,6 +164,8 @@ class TrainedModel:
     rows: FittedRows
     held_out: HeldOut | None
     witness: tuple[Witness, ...]
+    prevalence: str | None = None
+    choice: Choice | None = None
 
     @property
     def intercept(self) -> float:
@@ -160,8 +194,25 @@ class TrainedModel:
 
 
 @dataclass(frozen=True)
+class Counts:
+    """The device has an integer: value = offset + gain * count, both exact texts, the count within `bits`.
+
+    `chosen`: by the tool, from the range, since the plan gives no counts and the arithmetic is of integers.
+    """
+
+    bits: int
+    gain: str
+    offset: str
+    signed: bool
+    chosen: bool
+
+
+@dataclass(frozen=True)
 class InputRequest:
-    """What the device delivers. `low` and `high` are exact texts ("-95", "1/10"); None for an input with levels."""
+    """What the device delivers. `low` and `high` are exact texts ("-95", "1/10"); None for an input with levels.
+
+    `origin`: an exact text; the device delivers value - origin, subtracted before it becomes a float.
+    """
 
     name: str
     column: str
@@ -172,26 +223,38 @@ class InputRequest:
     outside: str
     missing: str
     assumed: bool
+    origin: str | None = None
+    counts: Counts | None = None
 
 
 @dataclass(frozen=True)
 class DecisionRequest:
-    """Costs as exact texts, or the threshold in log-odds itself; with a threshold the costs are None."""
+    """Costs as exact texts, or the threshold in log-odds itself; with a threshold the costs are None.
+
+    `no_call`: half the width, in log-odds, of the interval round the threshold in which nothing is decided.
+    """
 
     cost_false_alarm: str | None
     cost_miss: str | None
     threshold: str | None
+    no_call: str | None = None
 
 
 @dataclass(frozen=True)
 class Request:
-    """All that sealing needs beside the trained model. `tolerance` is the largest allowed log-odds error, or None."""
+    """All that sealing needs beside the trained model. `tolerance` is the largest allowed log-odds error, or None.
+
+    `compiler`: the user's own command line, which compiles the header in a check. `real_rows`: vectors and witness may
+    carry rows of the data.
+    """
 
     model: str
     arithmetic: str
     inputs: tuple[InputRequest, ...]
     decision: DecisionRequest
     tolerance: str | None
+    compiler: str | None = None
+    real_rows: bool = False
 
 
 # --- sealed ----------------------------------------------------------------------------------------------------------
@@ -201,7 +264,8 @@ class Request:
 class Input:
     """One input as the device checks it. With `levels` it is 0, 1, … K - 1, and low and high are 0 and K - 1.
 
-    `typical` stands in for a missing value where `missing` is "typical"; otherwise it is None.
+    `low`, `high` and `typical` are of what the device delivers: the value in the input's unit, or the value less
+    `origin`, or a count. `typical` stands in for a missing value where `missing` is "typical"; otherwise it is None.
     """
 
     name: str
@@ -212,6 +276,8 @@ class Input:
     outside: str
     missing: str
     typical: float | None
+    origin: str | None = None
+    counts: Counts | None = None
 
 
 @dataclass(frozen=True)
@@ -219,12 +285,14 @@ class Term:
     """One step of the sum. `form` "value": one weight, on the input less its datum; "level": one weight a level.
 
     `of` holds the positions of its inputs; `weights[k]` belongs to the log-odds of class k + 1 against class 0.
+    In integers a value's product is shifted left by `shift`: z + (weight * (count - datum) << shift).
     """
 
     form: str
     of: tuple[int, ...]
     datum: float | None
     weights: tuple[tuple[float, ...], ...]
+    shift: int | None = None
 
 
 @dataclass(frozen=True)
@@ -247,6 +315,17 @@ class Exponential:
 
 
 @dataclass(frozen=True)
+class Table:
+    """The logistic function for integers, in units of 2^-15: nodes at every 2^step units of the accumulator, from 0.
+
+    Between two nodes it is linear; beyond the last it is the last; below 0 it is 32768 less the value at -z.
+    """
+
+    step: int
+    nodes: tuple[int, ...]
+
+
+@dataclass(frozen=True)
 class About:
     """What goes with a sealed model but is not hashed into its id."""
 
@@ -259,7 +338,11 @@ class About:
 
 @dataclass(frozen=True)
 class SealedModel:
-    """Every number that a device carries. `intercepts[k]` belongs to the log-odds of class k + 1 against class 0."""
+    """Every number that a device carries. `intercepts[k]` belongs to the log-odds of class k + 1 against class 0.
+
+    In floating point `exponential` is there and `accumulator_shift` and `table` are None. In integers every number is an
+    int, log-odds, intercepts, level weights and thresholds are in units of 2^-accumulator_shift, and `table` is there.
+    """
 
     name: str
     arithmetic: str
@@ -268,8 +351,10 @@ class SealedModel:
     terms: tuple[Term, ...]
     intercepts: tuple[float, ...]
     decision: Thresholds
-    exponential: Exponential
+    exponential: Exponential | None
     about: About
+    accumulator_shift: int | None = None
+    table: Table | None = None
 
     @cached_property
     def model_id(self) -> str:

@@ -4,6 +4,9 @@ For class k + 1 against class 0, with the trained model's weights W, centres c a
 
     w_j = W_j / s_j        b = B - sum_j w_j c_j        (the fold, exact)
 
+What the device delivers may be x with v = offset + gain x (a count, or the value less an origin): w then becomes gain w,
+and b becomes b + w offset. A stated prevalence shifts b (Saerens, Latinne and Decaestecker 2002; King and Zeng 2001).
+
 In floating point an input whose range lies away from zero gets a datum d (the range's midpoint, short), and the device
 computes w (x - d); then b becomes b + sum w_j d_j with the unrounded w_j and the rounded d_j.
 """
@@ -21,6 +24,7 @@ from runtime_min.arithmetic import CONSTANTS
 from runtime_min.errors import Problem, SealError
 from runtime_min.model import (
     About,
+    Counts,
     DecisionRequest,
     Exponential,
     Input,
@@ -96,6 +100,45 @@ def threshold_of(decision: DecisionRequest) -> Fraction:
     return log_of_quotient(Fraction(decision.cost_false_alarm), Fraction(decision.cost_miss))
 
 
+def thresholds_of(decision: DecisionRequest) -> tuple[Fraction, Fraction]:
+    """The lower and the upper threshold: `no_call` below and above the threshold."""
+    threshold, half_width = threshold_of(decision), Fraction(decision.no_call or 0)
+    return threshold - half_width, threshold + half_width
+
+
+def unit_map(entry: Input | InputRequest) -> tuple[Fraction, Fraction]:
+    """(gain, offset): the value in the input's unit is offset + gain * what the device delivers."""
+    if entry.counts is not None:
+        return Fraction(entry.counts.gain), Fraction(entry.counts.offset)
+    return Fraction(1), Fraction(entry.origin or 0)
+
+
+def prevalence_shift(trained: TrainedModel) -> Fraction:
+    """logit(prevalence) - logit(weighted share of the event among the fitted rows), to 60 digits; 0 without one."""
+    if trained.prevalence is None:
+        return Fraction(0)
+    field = Fraction(trained.prevalence)
+    first, event = (Fraction(weight) for weight in trained.class_weights)
+    return log_of_quotient(field, 1 - field) - log_of_quotient(event, first)
+
+
+def delivered_limits(entry: InputRequest) -> tuple[Fraction, Fraction]:
+    """The exact limits of what the device delivers; of counts, the whole numbers inside the range and the bits."""
+    gain, offset = unit_map(entry)
+    ends = sorted((Fraction(str(end)) - offset) / gain for end in (entry.low, entry.high))
+    if entry.counts is None:
+        return ends[0], ends[1]
+    least, most = count_limits(entry.counts)
+    return Fraction(max(math.ceil(ends[0]), least)), Fraction(min(math.floor(ends[1]), most))
+
+
+def count_limits(counts: Counts) -> tuple[int, int]:
+    """The least and the largest count of so many bits; the least signed one is left out, since it means missing."""
+    if counts.signed:
+        return 1 - 2 ** (counts.bits - 1), 2 ** (counts.bits - 1) - 1
+    return 0, 2**counts.bits - 1
+
+
 def datum_of(low: Fraction, high: Fraction) -> Fraction | None:
     """The midpoint to 8 significant bits where it is farther from 0 than half the width; else None."""
     midpoint, half_width = (low + high) / 2, (high - low) / 2
@@ -138,7 +181,7 @@ def seal_request(
         for entry, typical in zip(request.inputs, trained.inputs, strict=True)
     )
     scores = fold(trained)
-    intercepts = [score.intercept for score in scores]
+    intercepts = [score.intercept + prevalence_shift(trained) for score in scores]
     terms = []
     for position, entry in enumerate(request.inputs):
         columns = [j for j, term in enumerate(trained.terms) if term.of == (position,)]
@@ -150,13 +193,14 @@ def seal_request(
             )
             terms.append(Term("level", (position,), None, rows))
             continue
-        datum = datum_of(Fraction(entry.low), Fraction(entry.high)) if entry.low and entry.high else None
+        gain, offset = unit_map(entry)
+        datum = datum_of(*delivered_limits(entry))
         for k, score in enumerate(scores):
-            intercepts[k] += score.weights[columns[0]] * (datum or 0)
-        rows = tuple((device(place, score.weights[columns[0]]),) for score in scores)
+            intercepts[k] += score.weights[columns[0]] * (offset + gain * (datum or 0))
+        rows = tuple((device(place, score.weights[columns[0]] * gain),) for score in scores)
         shown = None if datum is None else device(f'datum of "{entry.name}"', datum)
         terms.append(Term("value", (position,), shown, rows))
-    threshold = device("threshold", threshold_of(request.decision))
+    low, high = (device("threshold", value) for value in thresholds_of(request.decision))
     rounded_intercepts = tuple(device("intercept", value) for value in intercepts)
     if problems:
         raise SealError(problems)
@@ -168,7 +212,7 @@ def seal_request(
         inputs=inputs,
         terms=tuple(terms),
         intercepts=rounded_intercepts,
-        decision=Thresholds(threshold, threshold),
+        decision=Thresholds(low, high),
         exponential=Exponential(**cast(Any, constants)),
         about=About(purpose, request, trained.rows.sha256, plan_sha256, TOOL),
     )
@@ -274,16 +318,28 @@ def _device_input(
         if typical is None:
             problems.append(Problem(place, "has no typical value", "fit the model again"))
         else:
-            stand_in = device(f"{place}: typical", Fraction(typical))
+            gain, offset = unit_map(entry)
+            exact = (Fraction(typical) - offset) / gain
+            stand_in = device(f"{place}: typical", exact if entry.counts is None else Fraction(round(exact)))
     if entry.levels:
         low, high = 0.0, len(entry.levels) - 1.0
     else:
         told = len(problems)
-        low = device(f"{place}: range", Fraction(str(entry.low)))
-        high = device(f"{place}: range", Fraction(str(entry.high)))
+        low, high = (device(f"{place}: range", end) for end in delivered_limits(entry))
         if not low < high and len(problems) == told:
             found = f"the range {entry.low} to {entry.high} has no width once rounded"
             problems.append(Problem(place, found, "widen the range, or choose binary64"))
         if stand_in is not None:
             stand_in = min(max(stand_in, low), high)
-    return Input(entry.name, entry.unit, entry.levels, low, high, entry.outside, entry.missing, stand_in)
+    return Input(
+        entry.name,
+        entry.unit,
+        entry.levels,
+        low,
+        high,
+        entry.outside,
+        entry.missing,
+        stand_in,
+        entry.origin,
+        entry.counts,
+    )
