@@ -18,7 +18,7 @@ _HOMES = {
     "TrainedModel": "model",
 }
 
-__all__ = sorted(_HOMES)  # noqa: PLE0604
+__all__ = sorted(_HOMES)
 
 
 def __getattr__(name):  # type: ignore[no-untyped-def]

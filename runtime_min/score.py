@@ -23,7 +23,7 @@ def prepared(model: "SealedModel", inputs: "Sequence[float]") -> "tuple[int, lis
     """
     rounded = ROUND[model.arithmetic]
     if len(inputs) != len(model.inputs):
-        raise ValueError("%s takes %d inputs, found %d" % (model.name, len(model.inputs), len(inputs)))
+        raise ValueError(f"{model.name} takes {len(model.inputs)} inputs, found {len(inputs)}")
     values = []
     for position in range(len(model.inputs)):
         entry = model.inputs[position]
