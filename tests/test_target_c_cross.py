@@ -22,20 +22,21 @@ FUSED = {
     "x86_64 -march=haswell": r"\bvfn?m(add|sub)\w+",
     "x86_64 -march=skylake-avx512": r"\bvfn?m(add|sub)\w+",
     "aarch64-linux-gnu": r"\bf(n?m(add|sub)|ml[as])\b",
-    "thumbv8m.main-none-eabihf -mcpu=cortex-m33 -mfloat-abi=hard": r"\bvfn?m[as]\.",
+    "thumbv7em-none-eabihf -mcpu=cortex-m7 -mfpu=fpv5-sp-d16 -mfloat-abi=hard": r"\bvfn?m[as]\.",
     "thumbv7em-none-eabihf -mcpu=cortex-m7 -mfloat-abi=hard": r"\bvfn?m[as]\.",
     "riscv64 -march=rv64gc -mabi=lp64d": r"\bfn?m(add|sub)\.",
     "powerpc64le-linux-gnu": r"\bx?sn?m(add|sub)\w+|\bfn?m(add|sub)s?\b",
     "s390x-linux-gnu": r"\bw?f?m[as](e|d)?br\b|\bwfm[as]db\b",
 }
 WITHOUT = (
+    "thumbv7em-none-eabihf -mcpu=cortex-m4 -mfloat-abi=hard",  # it has them, but clang does not choose them
     "thumbv6m-none-eabi -mcpu=cortex-m0",
     "thumbv7m-none-eabi -mcpu=cortex-m3",
     "riscv32 -march=rv32imac -mabi=ilp32",
     "avr -mmcu=atmega328p",
     "mips-linux-gnu",  # the most significant byte first
 )
-ONE_PRECISION = "cortex-m33"  # its unit has no binary64: nothing to fuse
+ONE_PRECISION = "fpv5-sp"  # its unit has no binary64: nothing to fuse
 
 
 def assembly(text: str, name: str, target: str, folder: Path) -> str:
