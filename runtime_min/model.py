@@ -244,8 +244,8 @@ class DecisionRequest:
 class Request:
     """All that sealing needs beside the trained model. `tolerance` is the largest allowed log-odds error, or None.
 
-    `compiler`: the user's own command line, which compiles the header in a check. `real_rows`: vectors and witness may
-    carry rows of the data.
+    `compiler`: the user's own command line, which compiles the header in a check. `part`: the emulated part that runs
+    it there as well. `real_rows`: vectors and witness may carry rows of the data.
     """
 
     model: str
@@ -254,6 +254,7 @@ class Request:
     decision: DecisionRequest
     tolerance: str | None
     compiler: str | None = None
+    part: str | None = None
     real_rows: bool = False
 
 
