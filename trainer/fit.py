@@ -43,6 +43,9 @@ def fit_plan(plan: Plan, rows: Rows) -> TrainedModel:
     Centres, scales, typical values and weights come from the fitted rows alone; the results are of the held-out rows
     alone. Raises RowsError where the rows cannot be split, FitError with all that keeps them from determining a model.
     """
+    if plan.prior.method != "fixed" or plan.prior.terms or plan.decision.prevalence is not None:
+        found = "asks for more than a number under sd, which is not there yet"
+        raise FitError(Problem("[prior]", found, "write sd = 1.0, or another number, or inf"))
     out = held_out_rows(rows, plan.rows.held_out, plan.rows.seed)
     fitted = rows.values[~out]
     inputs = tuple(
@@ -60,7 +63,7 @@ def fit_plan(plan: Plan, rows: Rows) -> TrainedModel:
         rows.classes,
         with_typical(fitted, typical),
         rows.labels[~out],
-        None,
+        None if rows.weights is None else rows.weights[~out],
         Prior((0.0,) * len(columns), (sd,) * len(columns), _float_sd(plan.prior.intercept_sd)),
         [_limits(entry) for entry in rows.inputs],
         FittedRows(rows.total, rows.dropped, len(fitted), int(out.sum()), rows.sha256),

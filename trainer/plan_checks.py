@@ -15,12 +15,14 @@ from decimal import Decimal
 from fractions import Fraction
 
 from runtime_min.errors import Problem
+from runtime_min.model import INTEGERS
 from runtime_min.sealing import round_to
 
 # Fraction(Decimal("1e30000000")) never returns; no measured quantity needs more than this.
 LARGEST_EXPONENT = 400
 MOST_DIGITS = 400
 _LONGEST_SHOWN = 60
+_NOTHING: Mapping[str, tuple[str, str]] = {}
 
 
 class Unreadable(str):
@@ -40,7 +42,7 @@ class Section:
     def report(self, key: str, found: str, todo: str) -> None:
         self.problems.append(Problem(f"{self.where}: {key}", found, todo))
 
-    def refuse_other_keys(self, known: Iterable[str], later: Mapping[str, tuple[str, str]]) -> None:
+    def refuse_other_keys(self, known: Iterable[str], later: Mapping[str, tuple[str, str]] = _NOTHING) -> None:
         """Report each key that is neither known nor ours, with the nearest one, and each that is `later`'s.
 
         `later`: key -> (what is not there yet, what to do instead).
@@ -55,13 +57,13 @@ class Section:
                 todo = f"write {near[0]} if that is meant" if near else f"the keys here are {', '.join(ours)}"
                 self.report(key if key.isprintable() else shown(key), "found an unknown key", todo)
 
-    def section(self, key: str) -> Section:
-        """The table under `key`; an empty one if there is none."""
+    def section(self, key: str, mark: str = "") -> Section:
+        """The table under `key`; an empty one if there is none. `mark`: what it is called where that is not [key]."""
         value = self.table.get(key, {})
         if not isinstance(value, dict):
             self.report(key, f"found {shown(value)}, not a table", f"write [{key}] on a line of its own")
             value = {}
-        return Section(f"{self.where}: [{key}]", value, self.problems)
+        return Section(f"{self.where}: {mark or f'[{key}]'}", value, self.problems)
 
     def text(self, key: str, default: str | None, todo: str = "write a text in quotes") -> str:
         """A text of printable characters and line breaks, empty only where `default` is; None: the key is needed."""
@@ -96,15 +98,11 @@ class Section:
                 self.report(key, f"found {shown(text)} twice", "name it once")
         return tuple(value) if len(self.problems) == before else ()
 
-    def choice(self, key: str, default: str, choices: Sequence[str], later: Sequence[str] = ()) -> str:
+    def choice(self, key: str, default: str, choices: Sequence[str]) -> str:
         value = self.table.get(key, default)
         if isinstance(value, str) and value in choices:
             return value
-        todo = f"write {either(choices)}"
-        if isinstance(value, str) and value in later:
-            self.report(key, f"found {shown(value)}, which is not there yet", todo)
-        else:
-            self.report(key, f"found {shown(value)}", todo)
+        self.report(key, f"found {shown(value)}", f"write {either(choices)}")
         return default
 
     def number(self, key: str, default: Fraction, todo: str = "write a number") -> Fraction:
@@ -140,19 +138,25 @@ def exact(value: object) -> Fraction | str:
     return f"found {shown(value)}, not a number"
 
 
-def range_problem(low: Fraction, high: Fraction, arithmetic: str) -> tuple[str, str] | None:
-    """(found, what to do) where an input's range has no width in the device's arithmetic or leaves it; else None."""
+def range_problem(
+    low: Fraction, high: Fraction, arithmetic: str, origin: Fraction = Fraction(0)
+) -> tuple[str, str] | None:
+    """(found, what to do) where an input's range has no width in the device's arithmetic or leaves it; else None.
+
+    The device delivers value - origin. In integers the range itself sets the scaling: any width will do.
+    """
     if low > high:
         return f"found {decimal_text(low)} before {decimal_text(high)}", "put the lower limit first"
     if low == high:
         return f"found {decimal_text(low)} twice, a range without width", "write two different limits"
-    rounded = [round_to(arithmetic, limit) for limit in (low, high)]
+    delivered = "binary64" if arithmetic in INTEGERS else arithmetic
+    rounded = [round_to(delivered, limit - origin) for limit in (low, high)]
     for limit, number in zip((low, high), rounded, strict=True):
         if not math.isfinite(number):
-            return f"found {decimal_text(limit)}, too large for {arithmetic}", "write a limit that the device can hold"
+            return f"found {decimal_text(limit)}, too large for {delivered}", "write a limit that the device can hold"
     if not rounded[0] < rounded[1]:
         return (
-            f"found {decimal_text(low)} and {decimal_text(high)}, one and the same number in {arithmetic}",
+            f"found {decimal_text(low)} and {decimal_text(high)}, one and the same number in {delivered}",
             "write limits farther apart",
         )
     return None

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
-from runtime_min.model import DecisionRequest, InputRequest, Request
-from trainer.plan import Plan
+from fractions import Fraction
+
+from runtime_min.model import Counts, DecisionRequest, InputRequest, Request
+from trainer.plan import CountsPlan, Plan
 from trainer.table import Rows
 
 
@@ -15,14 +17,34 @@ def request_of(plan: Plan, rows: Rows) -> Request:
             column=entry.column,
             unit=entry.unit,
             levels=entry.levels,
-            low=None if entry.low is None else str(entry.low),
-            high=None if entry.high is None else str(entry.high),
+            low=_text(entry.low),
+            high=_text(entry.high),
             outside=entry.outside,
             missing=entry.missing,
             assumed=entry.assumed,
+            origin=_text(entry.origin),
+            counts=_counts(entry.counts),
         )
         for entry in rows.inputs
     )
-    decision = DecisionRequest(str(plan.decision.cost_false_alarm), str(plan.decision.cost_miss), None)
-    tolerance = None if plan.device.tolerance is None else str(plan.device.tolerance)
-    return Request(plan.model, plan.device.arithmetic, inputs, decision, tolerance)
+    asked = plan.decision
+    no_call = _text(asked.no_call) if asked.no_call else None
+    return Request(
+        model=plan.model,
+        arithmetic=plan.device.arithmetic,
+        inputs=inputs,
+        decision=DecisionRequest(str(asked.cost_false_alarm), str(asked.cost_miss), None, no_call),
+        tolerance=_text(plan.device.tolerance),
+        compiler=plan.device.compiler,
+        real_rows=plan.real_rows,
+    )
+
+
+def _text(number: Fraction | None) -> str | None:
+    return None if number is None else str(number)
+
+
+def _counts(counts: CountsPlan | None) -> Counts | None:
+    if counts is None:
+        return None
+    return Counts(counts.bits, str(counts.gain), str(counts.offset), counts.signed, chosen=False)

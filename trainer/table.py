@@ -38,7 +38,10 @@ class Rows:
     `labels`: (n,) class index.
     `keys`: what `split` tells rows apart by, without the seed; from values as parsed, before clamping.
     `dropped`: rows left out for a value missing under `missing = "fault"`; `total`: rows in the file.
-    `sha256`: of the file's bytes. The arrays are read-only.
+    `sha256`: of the file's bytes; of several files, of the lines of their digests in the order of their names.
+    `weights`: (n,) > 0; a row of weight 0 is read and counted in `total`, then left out, so that it has no influence.
+    `groups`: (n,) the group's text. `held_out`: (n,) True where the plan's column of held-out rows has 1.
+    Each of the three is None where the plan names no column. The arrays are read-only.
     """
 
     inputs: tuple[InputPlan, ...]
@@ -49,6 +52,9 @@ class Rows:
     dropped: int
     total: int
     sha256: str
+    weights: Floats | None = None
+    groups: tuple[str, ...] | None = None
+    held_out: npt.NDArray[np.bool_] | None = None
 
 
 def read_rows(plan: Plan) -> Rows:
