@@ -57,11 +57,11 @@ def test_cc_serves_where_gcc_and_clang_are_missing(monkeypatch: pytest.MonkeyPat
 @pytest.mark.parametrize(
     ("code", "trouble"),
     [
-        ("#error planted", 'it does not compile: artefact.h:LINE:2: error: #error planted'),
+        ("#error planted", "it does not compile: artefact.h:LINE:2: error: #error planted"),
         ("int unused;", "unused variable"),
         ("*(volatile int *)0 = 1;", "the program ended with status -"),
         ("return missing();", "it does not compile"),
-        ("extern int puts(const char *); puts(\"odd\");", "expected 1 rows of output, found "),
+        ('extern int puts(const char *); puts("odd");', "expected 1 rows of output, found "),
         ("extern void exit(int); exit(3);", "the program ended with status 3"),
         ("extern void exit(int); exit(0);", "expected 1 rows of output, found 0"),
     ],

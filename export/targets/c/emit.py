@@ -25,7 +25,7 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     typical = [entry.typical is not None for entry in sealed.inputs]
     datum = [term.datum is not None for term in sealed.terms]
     return fill(
-        "header.h.jinja",
+        ("interface.h.jinja", "scoring.h.jinja", "self_test.h.jinja"),
         sealed,
         guard=f"{sealed.name.upper()}_H",
         names=names,

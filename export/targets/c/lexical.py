@@ -74,9 +74,7 @@ def comment(text: str) -> str:
 
 def comment_lines(text: str, prefix: str = " * ") -> str:
     """`comment(text)`, broken into lines that each start with `prefix`; a word that is too long keeps its line."""
-    lines = textwrap.wrap(
-        comment(text), LINE_WIDTH - len(prefix), break_long_words=False, break_on_hyphens=False
-    )
+    lines = textwrap.wrap(comment(text), LINE_WIDTH - len(prefix), break_long_words=False, break_on_hyphens=False)
     return "\n".join((prefix + line).rstrip() for line in lines or [""])
 
 

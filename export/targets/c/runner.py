@@ -61,8 +61,14 @@ def run_one(way: Way, artefact: Path, sealed: SealedModel, text: str, row_count:
             return broken("it does not compile: " + _shown(done.stderr, folder))
         try:
             done = subprocess.run(
-                [str(program)], input=text, capture_output=True, text=True, errors="replace", timeout=RUN_SECONDS,
-                check=False, cwd=folder,
+                [str(program)],
+                input=text,
+                capture_output=True,
+                text=True,
+                errors="replace",
+                timeout=RUN_SECONDS,
+                check=False,
+                cwd=folder,
             )
         except (OSError, subprocess.TimeoutExpired) as error:
             return broken(f"the program did not finish ({_reason(error)})")
@@ -83,7 +89,7 @@ def rows_as_bits(rows: Sequence[Sequence[float]], arithmetic: str) -> str:
 def _write_sources(folder: Path, artefact: Path, sealed: SealedModel, separate: bool) -> list[Path]:
     (folder / "artefact.h").write_bytes(artefact.read_bytes())
     driver = folder / "driver.c"
-    text = fill("driver.c.jinja", sealed, header="artefact.h")
+    text = fill(("driver.c.jinja",), sealed, header="artefact.h")
     if not separate:
         driver.write_bytes(text)
         return [driver]

@@ -19,16 +19,17 @@ from runtime_min.model import SealedModel
 HERE = Path(__file__).parent
 
 
-def fill(template: str, sealed: SealedModel, **context: object) -> bytes:
-    """The file that the template makes of a model, in ASCII."""
+def fill(parts: tuple[str, ...], sealed: SealedModel, **context: object) -> bytes:
+    """The file that a template makes of a model, in ASCII. `parts`: the template's files, one after the other."""
     arithmetic = sealed.arithmetic
     name = lexical.model_name(sealed)
-    text = (HERE / template).read_text(encoding="ascii")
+    text = "".join((HERE / part).read_text(encoding="ascii") for part in parts)
     text = re.sub(r"\bNAME_", f"{name.upper()}_", text)
     text = re.sub(r"\bname_", f"{name}_", text)
     text = re.sub(r"\breal\b", lexical.REAL[arithmetic], text)
     text = re.sub(r"(?<=\d)r\b", lexical.SUFFIX[arithmetic], text)
-    filled = _environment().from_string(text).render(
+    template = _environment().from_string(text)
+    filled = template.render(
         model=sealed,
         name=name,
         double=arithmetic == "binary64",

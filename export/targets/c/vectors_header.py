@@ -13,7 +13,7 @@ from runtime_min.model import SealedModel
 def emit_vectors_header(sealed: SealedModel, vectors: Sequence[Vector]) -> bytes:
     """`vectors.h`, ASCII: bits of inputs and answers, and `NAME_run_vectors()`. There is at least one vector."""
     return fill(
-        "vectors.h.jinja",
+        ("vectors.h.jinja",),
         sealed,
         rows=[(vector.kind, vector_words(vector, sealed.arithmetic)) for vector in vectors],
         answers=[f"{{ {vector.expected.fault}, {vector.expected.decision} }}" for vector in vectors],
