@@ -122,19 +122,20 @@ def gradient_and_hessian(
     objective: Objective, theta: Array, z: Array, *, block_rows: int = BLOCK_ROWS
 ) -> tuple[Array, Array]:
     """Gradient (d + 1,) and Hessian (d + 1, d + 1) at θ, whose log-odds are z."""
-    total = (theta - objective.means) * objective.precisions
-    hessian = np.diag(objective.precisions)
-    scaled = np.empty((min(block_rows, len(z)), len(theta) - 1))
+    width = len(theta) - 1
+    firsts = np.zeros((2, width + 1))  # sums of slope and curvature, each times (1, x)
+    squares = np.zeros((width, width))
+    room = np.empty((min(block_rows, len(z)), width))
     for rows, block, sides, row_weights in _blocks(objective, block_rows):
-        slope, curvature = slopes(z[rows], sides, row_weights)
-        total[0] += slope.sum()
-        total[1:] += slope @ block
-        hessian[0, 0] += curvature.sum()
-        hessian[0, 1:] += curvature @ block
-        product = np.multiply(block, np.sqrt(curvature)[:, np.newaxis], out=scaled[: len(block)])
-        hessian[1:, 1:] += product.T @ product
-    hessian[1:, 0] = hessian[0, 1:]
-    return total, hessian
+        both = np.array(slopes(z[rows], sides, row_weights))
+        firsts[:, 0] += both.sum(axis=1)
+        firsts[:, 1:] += both @ block
+        scaled = np.multiply(block, np.sqrt(both[1])[:, np.newaxis], out=room[: len(block)])
+        squares += scaled.T @ scaled
+    hessian = np.empty((width + 1, width + 1))
+    hessian[0], hessian[1:, 0], hessian[1:, 1:] = firsts[1], firsts[1, 1:], squares
+    hessian.flat[:: width + 2] += objective.precisions
+    return firsts[0] + (theta - objective.means) * objective.precisions, hessian
 
 
 def _blocks(objective: Objective, block_rows: int) -> Iterator[tuple[slice, Array, Array, Array | None]]:
@@ -142,6 +143,21 @@ def _blocks(objective: Objective, block_rows: int) -> Iterator[tuple[slice, Arra
     for start in range(0, len(columns), block_rows):
         rows = slice(start, start + block_rows)
         yield rows, columns[rows], sides[rows], None if row_weights is None else row_weights[rows]
+
+
+def gradient_along(objective: Objective, theta: Array, directions: Array, *, block_rows: int = BLOCK_ROWS) -> Array:
+    """directionsᵀ g for directions (d + 1, m), the sum over the rows in pairs of doubles, (m,).
+
+    What a row's slope and its part of a direction are rounded by stays: near the optimum some u in posterior sd along
+    C e_j, since Σ ω v (x · C e_j)² <= C_jj.
+    """
+    total = Pairs(np.zeros(directions.shape[1]), np.zeros(directions.shape[1]))
+    for _, block, sides, row_weights in _blocks(objective, block_rows):
+        slope, _ = slopes(log_odds(block, theta), sides, row_weights)
+        along = block @ directions[1:] + directions[0]
+        total = add_pairs(total, pair_sum(two_product(along, np.broadcast_to(slope[:, np.newaxis], along.shape))))
+    by_prior: Array = ((theta - objective.means) * objective.precisions) @ directions
+    return total.high + (total.low + by_prior)
 
 
 def gradient_in_pairs(objective: Objective, theta: Array) -> Array:

@@ -34,6 +34,7 @@ from trainer.objective import (
     Objective,
     Prior,
     checked_gradient,
+    gradient_along,
     gradient_and_hessian,
     gradient_in_pairs,
     log_odds,
@@ -54,6 +55,7 @@ _LEAST_PIVOT = 1e-13  # of the scaled Hessian, whose entries carry errors of som
 _DOUBLE_STEPS, _PAIR_STEPS = 2, 3  # more Newton steps, at most, where a weight lies near a midpoint of the grid
 _LEAST_DOUBT = 1e-12  # no weight nearer to a midpoint of the grid than this is rounded without a closer look
 _DOUBT_PER_CHANGE = 100.0
+_DOUBT_PER_SD = 1e-14  # some 100 u: what rounding in single rows does to a step, in posterior sd
 
 _threads = ThreadpoolController()  # made once: looking the libraries up takes longer than a small fit
 
@@ -204,29 +206,69 @@ def _factor(hessian: Array) -> _Factor | None:
 
 
 def _to_grid(objective: Objective, theta: Array, covariance: Array, block_rows: int) -> tuple[Array, Checked]:
-    """θ on the grid and the gradient there; in pairs of doubles where the doubt about a weight reaches a midpoint.
+    """θ on the grid and the gradient there; with sums in pairs where the doubt about a weight reaches a midpoint.
 
     `offset` is one more Newton step, from the rounded weights. What it changes is a sample of what rounding does to a
     weight; the largest sample in posterior sd stands for all, so that no weight passes by a lucky one.
     """
     sds = np.sqrt(np.diagonal(covariance))
-    for attempt in range(_DOUBLE_STEPS + _PAIR_STEPS):
+    for _ in range(_DOUBLE_STEPS):
         rounded = np.rint(theta / WEIGHT_STEP) * WEIGHT_STEP
-        if attempt < _DOUBLE_STEPS:
-            checked = checked_gradient(objective, rounded, block_rows=block_rows)
-            slope = checked.slope
-        else:
-            slope = gradient_in_pairs(objective, rounded)
-        offset = -(covariance @ slope)
+        checked = checked_gradient(objective, rounded, block_rows=block_rows)
+        offset = -(covariance @ checked.slope)
         change = np.abs(rounded + offset - theta)
         doubt = np.maximum(_DOUBT_PER_CHANGE * sds * (change / sds).max(), _LEAST_DOUBT)
-        if (np.abs(offset) + doubt < 0.5 * WEIGHT_STEP).all():
-            break
+        undecided = np.abs(offset) + doubt >= 0.5 * WEIGHT_STEP
+        if not undecided.any():
+            return rounded, checked
         theta = rounded + offset
-    final = rounded + np.rint(offset / WEIGHT_STEP) * WEIGHT_STEP
-    if attempt >= _DOUBLE_STEPS:
+        if not (doubt > _LEAST_DOUBT).any():
+            break  # the sums are good enough, a weight does lie near a midpoint
+    final = _round_in_pairs(objective, theta, covariance, np.flatnonzero(undecided), block_rows)
+    if (final != rounded).any():
         checked = checked_gradient(objective, final, block_rows=block_rows)
     return final, checked
+
+
+def _round_in_pairs(
+    objective: Objective, theta: Array, covariance: Array, undecided: NDArray[np.intp], block_rows: int
+) -> Array:
+    """The grid point next to the optimum, for weights that sums in doubles leave undecided; θ is not rounded.
+
+    First only the undecided Newton steps are summed in pairs, which is cheap and leaves an error of some u sd. Where
+    that does not decide (columns that nearly repeat each other), everything is in pairs.
+    """
+    step = np.zeros(len(theta))
+    step[undecided] = -gradient_along(objective, theta, covariance[:, undecided], block_rows=block_rows)
+    doubt = np.maximum(_DOUBT_PER_CHANGE * np.abs(step), _DOUBT_PER_SD * np.sqrt(np.diagonal(covariance)))
+    if (_from_midpoint(theta, step) > doubt)[undecided].all():
+        return _nearest(theta, step)
+    for _ in range(_PAIR_STEPS):
+        step = -(covariance @ gradient_in_pairs(objective, theta))
+        if (_from_midpoint(theta, step) > _DOUBT_PER_CHANGE * np.abs(step)).all():
+            return _nearest(theta, step)
+        theta = theta + step
+    return _nearest(theta, np.zeros(len(theta)))
+
+
+def _from_midpoint(theta: Array, step: Array) -> Array:
+    """Distance of θ + step from the nearest midpoint of the grid."""
+    _, rest = _split(theta, step)
+    result: Array = np.abs(np.abs(rest - np.rint(rest)) - 0.5) * WEIGHT_STEP
+    return result
+
+
+def _nearest(theta: Array, step: Array) -> Array:
+    """θ + step on the grid, ties to the even multiple."""
+    even, rest = _split(theta, step)
+    result: Array = (even + np.rint(rest)) * WEIGHT_STEP
+    return result
+
+
+def _split(theta: Array, step: Array) -> tuple[Array, Array]:
+    """θ + step as an even multiple of the grid and a rest in units of it, the step not lost in the sum."""
+    even = 2.0 * np.rint(theta / (2.0 * WEIGHT_STEP))
+    return even, (theta - even * WEIGHT_STEP + step) / WEIGHT_STEP
 
 
 def _certified(theta: Array, checked: Checked, covariance: Array) -> Solution:
