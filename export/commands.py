@@ -9,11 +9,13 @@ from __future__ import annotations
 import argparse
 import os
 import sys
+import traceback
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from export.interrupts import Stopped, stoppable
 from runtime_min.errors import FirmlogitError, Problem, ReleaseError
 
 if TYPE_CHECKING:
@@ -22,22 +24,71 @@ if TYPE_CHECKING:
     from trainer.plan import Plan
 
 CAUTION = "A statistical classifier is not a safety function."
+TRACEBACK = "FIRMLOGIT_TRACEBACK"
 
 
 def main(arguments: list[str] | None = None) -> int:
-    """Exit status: 0 done and every check held; 1 a check or the budget failed; 2 the request or data were wrong."""
-    request = _parser().parse_args(arguments)
-    try:
-        return int(request.run(request))
-    except FirmlogitError as error:
-        print(error, file=sys.stderr)
-        return error.exit_status
-    except KeyboardInterrupt:
-        print("stopped; a release that was there before is as it was", file=sys.stderr)
-        return 130
-    except BrokenPipeError:
+    """Exit status: 0 done and every check held; 1 a check or the budget failed; 2 the request or data were wrong.
+
+    130, 143 or 129 where Ctrl-C, SIGTERM or the end of the terminal stopped it.
+    """
+    with stoppable():
+        try:
+            _open_streams()
+            request = _parser().parse_args(arguments)
+            status = int(request.run(request))
+            sys.stdout.flush()
+            return status
+        except FirmlogitError as error:
+            print(error, file=sys.stderr)
+            return error.exit_status
+        except Stopped as stop:
+            print("; ".join([f"stopped by {stop}", *getattr(stop, "__notes__", ())]), file=sys.stderr)
+            return stop.exit_status
+        except BrokenPipeError:
+            _close_stdout()
+            return 0
+        except (OSError, MemoryError) as error:
+            _close_stdout()
+            _traceback()
+            print(_machine(error), file=sys.stderr)
+            return 2
+        except Exception as error:
+            _traceback()
+            print(_mistake(error), file=sys.stderr)
+            return 2
+
+
+def _open_streams() -> None:
+    """Where a stream was closed before the start, what is printed goes nowhere."""
+    for name in ("stdout", "stderr"):
+        if getattr(sys, name) is None:
+            setattr(sys, name, os.fdopen(os.open(os.devnull, os.O_WRONLY), "w", encoding="utf-8"))
+
+
+def _close_stdout() -> None:
+    """Nobody reads on: what is still to be printed goes nowhere, and the flush at the end of Python finds no error."""
+    with suppress(OSError, ValueError):
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return 0
+
+
+def _machine(error: OSError | MemoryError) -> Problem:
+    if isinstance(error, MemoryError):
+        return Problem("memory", "found too little for these rows", "take fewer rows, or a machine with more memory")
+    where = error.filename if isinstance(error.filename, str) else "this machine"
+    return Problem(where, f"cannot be used ({error.strerror or error})", "free space or allow access there")
+
+
+def _mistake(error: Exception) -> str:
+    last = traceback.extract_tb(error.__traceback__)[-1]
+    what = " ".join(f"{type(error).__name__}: {error}".split())
+    at = f"{Path(last.filename).name}, line {last.lineno}"
+    return f"this is a mistake in firmlogit: {what} ({at}); please report it with what {TRACEBACK}=1 shows"
+
+
+def _traceback() -> None:
+    if os.environ.get(TRACEBACK):
+        traceback.print_exc()
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -85,27 +136,55 @@ def _check_options(parser: argparse.ArgumentParser) -> None:
 
 
 def _ship(request: argparse.Namespace) -> int:
+    into = request.into or request.plan.parent / "release"
+    with _told(into):
+        return _ship_into(request, into)
+
+
+def _ship_into(request: argparse.Namespace, into: Path) -> int:
     from export.report import check_lines, fit_lines, model_line, report_json
 
+    unchecked = _unchecked(request)
     with _progress() as progress:
         progress("reading the plan")
         plan, trained, sealed = _fitted(request.plan, progress)
         from export.release import write_release
 
-        if not request.json:
-            _print([model_line(sealed), *fit_lines(trained)])
+    if not request.json:
+        _print([model_line(sealed), *fit_lines(trained)])
+    with _progress() as progress:
+        progress("holding the fit against the raw rows")
         report = write_release(
             sealed,
             trained,
-            request.into or plan.path.parent / "release",
+            into,
             write=plan.write,
             thorough=request.all,
-            unchecked=_unchecked(request),
+            unchecked=unchecked,
             fit_checks=(_fit_check(plan, trained, sealed),),
             progress=progress,
         )
     _print([report_json(report)] if request.json else check_lines(report))
     return 0 if report.ok else 1
+
+
+@contextmanager
+def _told(into: Path) -> Iterator[None]:
+    """Where a signal stops the writing of a release, its sentence says what now stands in the place."""
+    from export.folder import identity
+
+    before = identity(into)
+    try:
+        yield
+    except Stopped as stop:
+        after = identity(into)
+        if after is None:
+            stop.add_note(f"no release was written to {into}")
+        elif after == before:
+            stop.add_note(f"what was in {into} before is as it was")
+        else:
+            stop.add_note(f"the new release is complete in {into}")
+        raise
 
 
 def _fit(request: argparse.Namespace) -> int:
@@ -130,9 +209,10 @@ def _export(request: argparse.Namespace) -> int:
     from export.targets import TARGETS
     from runtime_min.codec import load
 
-    sealed = load(request.sealed)
-    for name in export_artefacts(sealed, request.into, tuple(TARGETS)):
-        _print([f"{'written':<12}{request.into / name}"])
+    with _told(request.into), _progress() as progress:
+        progress("writing the artefacts")
+        written = export_artefacts(load(request.sealed), request.into, tuple(TARGETS))
+    _print([f"{'written':<12}{request.into / name}" for name in written])
     return 0
 
 
@@ -194,10 +274,17 @@ def _unchecked(request: argparse.Namespace) -> tuple[str, ...]:
 
 
 def _print(lines: list[str]) -> None:
-    """Print in whatever encoding the terminal or pipe has; what it cannot show becomes an escape."""
+    """Print in whatever encoding the terminal or pipe has; what it cannot show becomes an escape.
+
+    Where nobody reads any more the work goes on: the exit status is that of the work.
+    """
     encoding = sys.stdout.encoding or "ascii"
-    for line in lines:
-        print(line.encode(encoding, "backslashreplace").decode(encoding))
+    try:
+        for line in lines:
+            print(line.encode(encoding, "backslashreplace").decode(encoding))
+        sys.stdout.flush()
+    except BrokenPipeError:
+        _close_stdout()
 
 
 @contextmanager

@@ -56,6 +56,7 @@ def write_release(
         if report.broken:
             return replace(report, release=None)
         _write_manifest(staging, sealed, files, write, report.checks)
+        _refuse_foreign(into)  # it may have come while the checks ran
         folder.put_in_place(staging, into)
     return report
 
@@ -73,18 +74,27 @@ def export_artefacts(sealed: SealedModel, into: Path, write: Sequence[str]) -> t
 
 
 def _refuse_foreign(into: Path) -> None:
-    """A folder that is no release is never replaced."""
-    if not into.exists() and not into.is_symlink():
-        return
-    if into.is_dir() and not into.is_symlink():
-        if not any(into.iterdir()):
+    """What is no release, or holds what no release wrote, is never replaced. A link is followed, and stays."""
+    place = folder.followed(into)
+    found = "is there and is not a release"
+    try:
+        if place.is_symlink():
+            found = "is a link that leads in a circle"
+        elif not place.exists() or (place.is_dir() and not any(place.iterdir())):
             return
-        try:
-            if json.loads((into / MANIFEST).read_bytes())["format"] == MANIFEST_FORMAT:
-                return
-        except (OSError, ValueError, KeyError, TypeError):
-            pass
-    raise ReleaseError(Problem(str(into), "is there and is not a release", "choose another --into, or remove it"))
+        else:
+            manifest = json.loads((place / MANIFEST).read_bytes())
+            if manifest["format"] == MANIFEST_FORMAT:
+                written = {*manifest["files"], MANIFEST, "__pycache__"}
+                others = sorted(entry.name for entry in place.iterdir() if entry.name not in written)
+                if not others:
+                    return
+                found = f"is a release that also holds {', '.join(others)}, which would be lost"
+    except (FileNotFoundError, NotADirectoryError, ValueError, KeyError, TypeError, RecursionError):
+        pass
+    except OSError as error:
+        found = f"cannot be looked at ({error.strerror})"
+    raise ReleaseError(Problem(str(into), found, "choose another --into, or remove it"))
 
 
 def _write_manifest(
