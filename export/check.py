@@ -16,12 +16,14 @@ from pathlib import Path
 from typing import Any
 
 from export import vectors
+from export.advice import advise
 from export.attack import Attack, attack
-from export.budget import Budget, advise, derive, witness_misses
+from export.budget import Budget, derive
 from export.contents import MANIFEST, MANIFEST_FORMAT, contents
 from export.diagnose import differences
 from export.targets import TARGETS, Run, Vector
 from export.vector_files import read_vectors
+from export.witness import witness_misses
 from runtime_min.codec import load, load_trained, sealed_text
 from runtime_min.errors import BudgetError, FirmlogitError, Problem, ReleaseError
 from runtime_min.model import SealedModel, TrainedModel
@@ -234,7 +236,8 @@ def _budget(
     checks = [_judged(name, "error budget", int(over), f"{bound}, {allowed}")]
     found = attack(trained, sealed, budget, int(sealed.model_id, 16), "thorough" if thorough else "quick")
     broken = not found.share <= 1
-    sentence = f"{found.tried:,} rows, at worst {found.share:.0%} of the bound"
+    tried = f"all {found.tried:,} rows that there are" if found.everything else f"{found.tried:,} rows"
+    sentence = f"{tried}, at worst {found.share:.0%} of the bound"
     checks.append(_judged(name, "attack on the budget", int(broken), sentence))
     seen = witness_misses(trained, sealed, budget)
     sentence = f"{seen.compared} rows, at worst {seen.largest:.0%} of what is allowed"

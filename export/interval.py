@@ -29,6 +29,16 @@ class Interval:
     def __add__(self, other: Interval) -> Interval:
         return Interval(self.low + other.low, self.high + other.high)
 
+    @property
+    def middle(self) -> Fraction:
+        """The number half-way between the ends."""
+        return (self.low + self.high) / 2
+
+    @property
+    def radius(self) -> Fraction:
+        """Half the distance of the ends."""
+        return (self.high - self.low) / 2
+
     def minus(self, constant: Fraction) -> Interval:
         """Every number less a constant."""
         return Interval(self.low - constant, self.high - constant)
@@ -94,12 +104,12 @@ def product_rounding(arithmetic: str, factor: Fraction, values: Interval) -> Fra
     return min(error, ZERO if abs(factor) >= 1 else Fraction(2) ** (lowest - 1))
 
 
-def difference_rounding(arithmetic: str, values: Interval, constant: Fraction) -> Fraction:
+def difference_rounding(arithmetic: str, values: Interval, constant: Fraction, whole: bool = False) -> Fraction:
     """The largest rounding error of v - constant for numbers v of the arithmetic, both numbers of the arithmetic.
 
-    Exact where constant / 2 <= v <= 2 constant (Sterbenz 1974, Floating-Point Computation, theorem 4.3.1). The rest
-    lies below and above; each side is exact where the difference spans no more units of its own grid than the
-    significand can hold.
+    whole: v is a whole number. Exact where constant / 2 <= v <= 2 constant (Sterbenz 1974, Floating-Point Computation,
+    theorem 4.3.1). The rest lies below and above; each side is exact where the difference spans no more units of its
+    own grid than the significand can hold.
     """
     digits, lowest, _ = FORMATS[arithmetic]
     near = Interval(constant / 2, constant * 2) if constant > 0 else Interval(constant * 2, constant / 2)
@@ -112,7 +122,7 @@ def difference_rounding(arithmetic: str, values: Interval, constant: Fraction) -
             continue
         smallest = ZERO if side.low <= 0 <= side.high else min(abs(side.low), abs(side.high))
         unit = 2 * half_unit(arithmetic, smallest) or Fraction(2) ** lowest
-        unit = min(unit, _grid(constant))
+        unit = min(max(unit, Fraction(int(whole))), _grid(constant))
         difference = side.minus(constant)
         if difference.magnitude > unit * 2**digits:
             worst = max(worst, sum_rounding(arithmetic, difference))

@@ -63,7 +63,8 @@ def check_lines(report: Report) -> list[str]:
         lines.append(_line("budget", f"log-odds off by at most {bound}, tolerance {allowed}"))
     if report.attack is not None:
         worst, share = float(report.attack.worst), report.attack.share
-        lines.append(_line("", f"worst error found {worst:.3g}, {share:.0%} of that bound"))
+        where = " in all inputs there are" if report.attack.everything else ""
+        lines.append(_line("", f"worst error found{where} {worst:.3g}, {share:.0%} of that bound"))
     lines += ["", *(_check_line(entry, report.accepted) for entry in report.checks), ""]
     failed = [entry for entry in report.checks if entry.ran and not entry.ok]
     missing = [entry for entry in report.checks if not entry.ran and entry.target not in report.accepted]
@@ -123,7 +124,8 @@ def _budget(report: Report) -> dict[str, Any] | None:
         "tolerance": None if report.tolerance is None else float(report.tolerance),
         "items": [{"what": item.what, "bound": float(item.bound)} for item in report.budget.items],
         "worst_found": None if report.attack is None else float(report.attack.worst),
+        "every_input_tried": report.attack is not None and report.attack.everything,
         "threshold": float(report.budget.threshold),
         "probability": float(report.budget.probability),
-        "decision_band": list(report.budget.band),
+        "decision_bands": [list(band) for band in report.budget.bands],
     }

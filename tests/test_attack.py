@@ -105,7 +105,7 @@ def level_weights_off() -> Pair:
 
 
 DOMINATED = {
-    "intercept": lambda: line("-1", "2", intercept=2.0**20 + 31 / 1024),
+    "mid-range": lambda: line("-1", "2", intercept=2.0**20 + 31 / 1024),
     "input": lambda: line("-10", "11"),
     "weight": weights_off,
     "weight of a level": level_weights_off,

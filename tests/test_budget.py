@@ -26,7 +26,8 @@ from models import (
 )
 from one_input import line
 
-from export.budget import Budget, advise, derive, witness_misses
+from export.advice import advise
+from export.budget import Budget, derive
 from export.exact import trained_log_odds
 from export.interval import (
     Interval,
@@ -36,6 +37,7 @@ from export.interval import (
     rounding,
     sum_rounding,
 )
+from export.witness import witness_misses
 from runtime_min import score
 from runtime_min.errors import SealError
 from runtime_min.model import DecisionRequest, SealedModel, TrainedModel, Witness
@@ -70,13 +72,14 @@ def error(trained: TrainedModel, sealed: SealedModel, reals: list[Fraction]) -> 
 
 def test_budget_of_a_third_of_x_is_what_the_derivation_by_hand_gives() -> None:
     # u = round(1/3) = 11184811 * 2^-25, so u - 1/3 = (3 * 11184811 - 2^25) / (3 * 2^25) = 1 / (3 * 2^25).
-    # x up to 10: units of 2^-20 (2^-49 where it is read as binary64 first). u x up to 3.4: units of 2^-22.
-    # The range 0 to 10 has no datum; the sum starts at 0, so it is exact.
+    # Over 0 to 10 that is 5 +- 5 times as much. x up to 10: units of 2^-20 (2^-49 where it is read as binary64 first).
+    # u x up to 3.4: units of 2^-22. The range 0 to 10 has no datum; the sum starts at 0, so it is exact.
     trained, sealed = line("0", "10", scale=3.0)
     budget = derive(trained, sealed)
     assert bounds(budget) == {
+        "mid-range": Fraction(5, 3 * 2**25),
         "input": Fraction(1, 3) * (two(-21) + two(-50)),
-        "weight": Fraction(10, 3 * 2**25),
+        "weight": Fraction(5, 3 * 2**25),
         "product": two(-23),
     }
     assert budget.log_odds == sum(bounds(budget).values())
@@ -107,10 +110,10 @@ def test_input_limit_at_a_power_of_two_counts_the_reals_just_above_it() -> None:
     assert bounds(derive(trained, sealed))["input"] == two(-51)
 
 
-def test_intercept_item_is_the_distance_of_the_device_intercept() -> None:
+def test_mid_range_item_is_the_distance_of_the_device_intercept_where_weights_are_exact() -> None:
     # 2^20 + 31/1024 rounds to 2^20 in binary32 (units of 2^-3).
     trained, sealed = line("-1", "2", intercept=2.0**20 + 31 / 1024)
-    assert bounds(derive(trained, sealed))["intercept"] == Fraction(31, 1024)
+    assert bounds(derive(trained, sealed))["mid-range"] == Fraction(31, 1024)
 
 
 def test_datum_subtraction_is_free_where_sterbenz_proves_it_exact() -> None:
@@ -126,13 +129,24 @@ def test_datum_subtraction_costs_where_small_inputs_lose_bits() -> None:
     assert bounds(derive(trained, sealed))["datum"] == two(-22)
 
 
-def test_level_weights_cost_the_worst_level() -> None:
-    # Units of 2^-22 in [2, 4) and of 2^-19 in [16, 32): the second weight rounds by 3 * 2^-22.
+def test_mid_range_item_counts_signs() -> None:
+    # The device's weight is 2^-30 below the trained one, so 4 * 2^-30 at mid-range of 0 to 8. Its intercept is 2^-25
+    # above the trained one, which makes up for that, or 2^-25 below.
+    for sign in (1, -1):
+        trained, sealed = line("0", "8", weight=1 + two_f(-30), intercept=sign * (1 - two_f(-25)))
+        assert sealed.terms[0].weights == ((1.0,),)
+        assert sealed.intercepts == (float(sign),)
+        assert bounds(derive(trained, sealed))["mid-range"] == abs(sign * two(-25) - 4 * two(-30))
+        assert bounds(derive(trained, sealed))["weight"] == 4 * two(-30)
+
+
+def test_level_weights_cost_half_of_what_lies_between_the_extreme_levels() -> None:
+    # Units of 2^-22 in [2, 4) and of 2^-19 in [16, 32): the weights round by -2^-24 and -3 * 2^-22.
     weights = (3 + two_f(-24), 17 + 3 * two_f(-22))
     trained = make_trained([IMPELLER], 3)
     trained = replace(trained, scores=(replace(trained.scores[0], intercept=0.0, weights=weights),))
     sealed = seal_request(trained, make_request([IMPELLER]))
-    assert bounds(derive(trained, sealed)) == {"weight": 3 * two(-22)}
+    assert bounds(derive(trained, sealed)) == {"mid-range": 3 * two(-23), "weight": 3 * two(-23)}
 
 
 def test_threshold_item_is_the_rounding_of_the_logarithm() -> None:
@@ -144,8 +158,8 @@ def test_threshold_item_is_the_rounding_of_the_logarithm() -> None:
         off = abs(mpmath.mpf(sealed.decision.low) - exact)
         assert abs(mpmath.mpf(budget.threshold.numerator) / budget.threshold.denominator - off) < mpmath.mpf(10) ** -45
         half = mpmath.mpf(budget.log_odds.numerator) / budget.log_odds.denominator + off
-        assert budget.band[0] <= exact - half <= math.nextafter(budget.band[0], math.inf)
-        assert math.nextafter(budget.band[1], -math.inf) <= exact + half <= budget.band[1]
+        assert budget.bands[0][0] <= exact - half <= math.nextafter(budget.bands[0][0], math.inf)
+        assert math.nextafter(budget.bands[0][1], -math.inf) <= exact + half <= budget.bands[0][1]
 
 
 # --- one rounding -----------------------------------------------------------------------------------------------------
@@ -324,7 +338,7 @@ def test_outside_the_band_the_device_decides_as_the_exact_threshold_does() -> No
         real = Fraction(float(threshold)) * Fraction(7, 13) + step * two(-28)
         z = trained_log_odds(trained, [real])[0]
         decision = score.decide(sealed, [round_to("binary32", real)])
-        if budget.band[0] <= z <= budget.band[1]:
+        if budget.bands[0][0] <= z <= budget.bands[0][1]:
             inside += 1
         else:
             assert decision == int(z > Fraction(float(threshold)))
@@ -409,8 +423,9 @@ def test_advice_names_the_costliest_item_the_arithmetic_and_the_origin() -> None
     problem = advise(trained, sealed, derive(trained, sealed), Fraction(1, 100_000))
     assert str(problem) == (
         'error budget: 6.11e-05 in log-odds is more than the tolerance 1e-05, and the costliest item is input "x" '
-        "rounded to binary32, 6.11e-05; choose binary64 (its bound is 1.14e-13), or have the device subtract 1000 kPa "
-        'from "x" before the value becomes a float (the bound is then 1.91e-06), or raise the tolerance to 6.11e-05'
+        'rounded to binary32, 6.11e-05; choose arithmetic = "binary64" (its bound is 1.14e-13), or write origin = 1000 '
+        'at "x": the device subtracts it before the value becomes a float (the bound is then 1.91e-06), or raise the '
+        "tolerance to 6.11e-05"
     )
 
 
