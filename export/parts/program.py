@@ -1,0 +1,104 @@
+"""Fill a program's template, compile it for a part, run it there: what it wrote, or what went wrong."""
+
+from __future__ import annotations
+
+import subprocess
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from tempfile import TemporaryDirectory
+
+from export.parts import HERE, Part
+from export.targets.c.template import fill
+from runtime_min.arithmetic import ROUND, raw_bits
+from runtime_min.model import FLOATS, SealedModel
+
+COMPILE_SECONDS = 60
+SHOWN_LINES = 3
+END = "end"
+
+
+@dataclass(frozen=True)
+class Types:
+    """The header's types in C, and how many hexadecimal digits their bits have."""
+
+    input: str
+    log_odds: str
+    probability: str
+    digits: tuple[int, int, int]
+
+
+TYPES = {
+    "binary32": Types("float", "float", "float", (8, 8, 8)),
+    "binary64": Types("double", "double", "double", (16, 16, 16)),
+    "int16": Types("int16_t", "int32_t", "uint16_t", (4, 8, 4)),
+    "int32": Types("int32_t", "int64_t", "uint16_t", (8, 16, 4)),
+}
+
+
+class TroubleError(Exception):
+    """A program that does not compile, does not end, or ends in a fault: one sentence."""
+
+
+@contextmanager
+def folder_of(part: Part, sources: Mapping[str, bytes]) -> Iterator[Path]:
+    """A folder with these files and those that every program of the part needs."""
+    with TemporaryDirectory(prefix="firmlogit-") as folder:
+        for name in part.chain.SUPPORT:
+            (Path(folder) / name).write_bytes((HERE / name).read_bytes())
+        for name, data in sources.items():
+            (Path(folder) / name).write_bytes(data)
+        yield Path(folder)
+
+
+def compile_program(part: Part, folder: Path, flags: Sequence[str]) -> None:
+    """Compile every C file of the folder to one program. Raises TroubleError with the compiler's first words."""
+    sources = sorted(path.name for path in folder.iterdir() if path.suffix == ".c")
+    done = _ran(part.chain.compile_command(part, flags, sources), folder, COMPILE_SECONDS, "the compiler")
+    if done.returncode != 0:
+        telling = ("error", "warning", "overflowed")
+        lines = [line for line in done.stderr.splitlines() if any(word in line for word in telling)]
+        raise TroubleError("it does not compile: " + (" | ".join(lines[:SHOWN_LINES]) or "no message"))
+
+
+def run_program(part: Part, folder: Path, seconds: float, *, counted: bool = False) -> list[str]:
+    """The lines that the program wrote, without the last one, "end". Raises TroubleError where that line is not there."""
+    done = _ran(part.chain.emulate_command(part, counted), folder, seconds, "the program")
+    lines = part.chain.written(done.stdout, done.stderr).splitlines()
+    if not lines or lines[-1] != END:
+        last = f', last "{_printable(lines[-1])}"' if lines else ""
+        raise TroubleError(f"the program stopped early, after {len(lines)} lines{last}")
+    return lines[:-1]
+
+
+def program(template: str, part_sealed: SealedModel, **context: object) -> bytes:
+    """The C file that a template of this folder makes of a model."""
+    return fill((str(HERE / template),), part_sealed, types=TYPES[part_sealed.arithmetic], header="model.h", **context)
+
+
+def row_bytes(row: Sequence[float], arithmetic: str) -> str:
+    """The bits of a row's inputs, rounded to the arithmetic, as C lists bytes: the least significant first."""
+    size = TYPES[arithmetic].digits[0] // 2
+    words = (_bits(value, arithmetic) % 256**size for value in row)
+    return ", ".join(f"0x{byte:02x}" for word in words for byte in word.to_bytes(size, "little"))
+
+
+def _bits(value: float, arithmetic: str) -> int:
+    return raw_bits(ROUND[arithmetic](float(value)), arithmetic) if arithmetic in FLOATS else int(value)
+
+
+def _ran(command: Sequence[str], folder: Path, seconds: float, what: str) -> subprocess.CompletedProcess[str]:
+    try:
+        return subprocess.run(
+            command, cwd=folder, stdin=subprocess.DEVNULL, capture_output=True, text=True, errors="replace",
+            timeout=seconds, check=False,
+        )  # fmt: skip
+    except subprocess.TimeoutExpired:
+        raise TroubleError(f"{what} did not finish within {seconds:g} s") from None
+    except OSError as error:
+        raise TroubleError(f"{what} did not start ({error.strerror})") from None
+
+
+def _printable(text: str) -> str:
+    return "".join(c if c.isprintable() else "?" for c in text[:60])
