@@ -14,7 +14,7 @@ import pytest
 
 from runtime_min.errors import PlanError
 from runtime_min.names import c_input_name, name_and_unit, name_problem, unit_suffix
-from trainer.plan import InputPlan, Plan, read_plan
+from trainer.plan import InputPlan, Plan, PriorPlan, read_plan
 
 EXAMPLE = Path(__file__).parent.parent / "examples" / "pump_alarm" / "plan.toml"
 
@@ -66,10 +66,11 @@ def test_example_plan_is_read_as_it_is_written() -> None:
 
 
 def test_least_plan_has_the_documented_defaults(tmp_path: Path) -> None:
-    plan = plan_of(tmp_path, 'model = "m"\nrows = { file = "a.csv", label = "y" }\nprior = { sd = inf }\n')
+    plan = plan_of(tmp_path, 'model = "m"\nrows = { file = "a.csv", label = "y" }\n')
     assert plan.inputs == ()
     assert (plan.rows.classes, plan.rows.held_out, plan.rows.seed) == (None, Fraction(1, 4), 0)
-    assert (plan.prior.sd, plan.prior.intercept_sd, plan.purpose) == (None, None, "")
+    assert plan.prior == PriorPlan("cross-validation", None, None, ())
+    assert plan.purpose == ""
     assert (plan.decision.cost_false_alarm, plan.decision.cost_miss) == (1, 1)
     assert (plan.device.arithmetic, plan.device.tolerance) == ("binary32", None)
     assert plan.write == ("python", "c", "onnx")
@@ -97,8 +98,10 @@ def test_held_out_may_be_none_and_write_keeps_its_own_order(tmp_path: Path) -> N
 
 NAME_RULE = "write lower-case letters, digits and single underscores, from a letter on, at most 63"
 NEED_CLASSES = "list two classes, the event last"
-NEED_SHARE = "write a share of the rows from 0 to below 1"
-NEED_SD = "write a number above 0, or inf for a flat prior"
+NEED_SHARE = "write a share from 0 to below 1, or the name of a column of 0 and 1"
+NEED_SD = 'write "cross-validation", a number above 0, or inf for a flat prior'
+NEED_OWN_SD = "write a number above 0, or inf for a flat prior"
+NEED_FILE = "name a .csv, a .npz or a .parquet"
 FLOW = '[[input]] "flow": '
 INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, levels, counts, origin"
 
@@ -130,17 +133,30 @@ INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, lev
         ),
         ("[prior]", "[piror]\nsd = 2\n[prior]", "piror: found an unknown key; write prior if that is meant"),
         # rows
-        ('file = "runs.csv"', "", "[rows]: file: found nothing; name the file of rows, a .csv"),
-        ('"runs.csv"', '"runs.xls"', '[rows]: file: found "runs.xls"; name a .csv'),
+        ('file = "runs.csv"', "", f"[rows]: file: found nothing; {NEED_FILE}"),
+        ('"runs.csv"', '"runs.xls"', f'[rows]: file: found "runs.xls"; {NEED_FILE}'),
+        ('"runs.csv"', '"runs*"', f'[rows]: file: found "runs*"; {NEED_FILE}'),
+        ('"state"', '"state"\nweight = ""', "[rows]: weight: found an empty text; name the column of row weights"),
+        ('"state"', '"state"\nweight = 2', "[rows]: weight: found 2, not a text; name the column of row weights"),
         (
-            '"runs.csv"',
-            '"runs.npz"',
-            '[rows]: file: found "runs.npz": .npz and .parquet are not there yet; write the rows as .csv',
+            '"state"',
+            '"state"\ngroup = "state"',
+            '[rows]: group: found "state", which is the label; name another column',
         ),
         (
-            '"runs.csv"',
-            '"run*.csv"',
-            '[rows]: file: found "run*.csv": several files are not there yet; put the rows into one .csv',
+            '"state"',
+            '"state"\nweight = "h"\nheld_out = "h"',
+            '[rows]: held_out: found "h", which is the weight; name another column',
+        ),
+        (
+            '"state"',
+            '"state"\nweight = "flow"',
+            f'{FLOW}column: found "flow", which is the weight; name a measured column',
+        ),
+        (
+            '"state"',
+            '"state"\nheld_out = "flow"',
+            f'{FLOW}column: found "flow", which is the column of held-out rows; name a measured column',
         ),
         ('label = "state"', "", "[rows]: label: found nothing; name the column that holds the class"),
         ('"state"', '"flow"', f'{FLOW}column: found "flow", which is the label; name a measured column'),
@@ -165,11 +181,7 @@ INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, lev
         ('"state"', '"state"\nheld_out = 1', f"[rows]: held_out: found 1; {NEED_SHARE}"),
         ('"state"', '"state"\nheld_out = -0.5', f"[rows]: held_out: found -0.5; {NEED_SHARE}"),
         ('"state"', '"state"\nheld_out = nan', f"[rows]: held_out: found nan, which is not finite; {NEED_SHARE}"),
-        (
-            '"state"',
-            '"state"\nheld_out = "test"',
-            f'[rows]: held_out: found "test": a column that says which rows is not there yet; {NEED_SHARE}',
-        ),
+        ('"state"', '"state"\nheld_out = ""', f"[rows]: held_out: found an empty text; {NEED_SHARE}"),
         ('"state"', '"state"\nseed = -1', "[rows]: seed: found -1; write a whole number from 0 to 9007199254740991"),
         (
             '"state"',
@@ -203,12 +215,12 @@ INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, lev
         # inputs
         ('unit = "m3/h"', 'outside = "warp"', f'{FLOW}outside: found "warp"; write "fault" or "clamp"'),
         ('unit = "m3/h"', 'missing = "mean"', f'{FLOW}missing: found "mean"; write "fault" or "typical"'),
+        ('"m3/h"', f'"{"m" * 41}"', f"{FLOW}unit: found 41 characters; write a unit of at most 40"),
         (
             'unit = "m3/h"',
-            'unit = "a\\nb"',
-            f'{FLOW}unit: found "a\\nb"; write a unit in one line of at most 40 characters',
+            'outside = "\\u0007\\u202e"',
+            f'{FLOW}outside: found "\\u0007\\u202e"; write "fault" or "clamp"',
         ),
-        ('unit = "m3/h"', 'unit = "\\u0007"', f'{FLOW}unit: found a control character in "\\u0007"; remove it'),
         (
             "range = [0, 120.5]",
             'levels = ["a", "b"]',
@@ -223,14 +235,8 @@ INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, lev
         # prior, decision, device, release
         (
             "sd = 1.0",
-            "",
-            "[prior]: sd: found nothing: choosing it from the rows is not there yet; "
-            "write sd = 1.0, a moderate prior on standardised weights, or another number, or inf",
-        ),
-        (
-            "sd = 1.0",
-            'sd = "cross-validation"',
-            f'[prior]: sd: found "cross-validation", which is not there yet; {NEED_SD}',
+            'sd = "evidence"',
+            f'[prior]: sd: found "evidence", which is not there yet; {NEED_SD}',
         ),
         ("sd = 1.0", 'sd = "wide"', f'[prior]: sd: found "wide", not a number; {NEED_SD}'),
         ("sd = 1.0", "sd = 0.0", f"[prior]: sd: found 0; {NEED_SD}"),
@@ -241,23 +247,23 @@ INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, lev
             "sd = 9e-5",
             "[prior]: sd: found 9e-05, too narrow for weights kept in steps of 2^-30; write 0.0001 or more",
         ),
-        ("sd = 1.0", "sd = 1.0\nintercept_sd = 0", f"[prior]: intercept_sd: found 0; {NEED_SD}"),
+        ("sd = 1.0", "sd = 1.0\nintercept_sd = 0", f"[prior]: intercept_sd: found 0; {NEED_OWN_SD}"),
         ("sd = 1.0", "sd = 1.0\n[decision]\ncost_miss = 0", "[decision]: cost_miss: found 0; write a number above 0"),
         ("sd = 1.0", "sd = 1.0\n[device]\ntolerance = -1", "[device]: tolerance: found -1; write a number above 0"),
         (
             "sd = 1.0",
-            'sd = 1.0\n[device]\narithmetic = "int16"',
-            '[device]: arithmetic: found "int16", which is not there yet; write "binary32" or "binary64"',
+            'sd = 1.0\n[device]\narithmetic = "int8"',
+            '[device]: arithmetic: found "int8"; write "binary32", "binary64", "int16" or "int32"',
         ),
         (
             "sd = 1.0",
             'sd = 1.0\n[release]\nwrite = ["rust"]',
-            '[release]: write: found "rust"; list some of python, c, onnx',
+            '[release]: write: found "rust"; list some of python, c, onnx, table',
         ),
         (
             "sd = 1.0",
             "sd = 1.0\n[release]\nwrite = []",
-            "[release]: write: found an empty list; list some of python, c, onnx",
+            "[release]: write: found an empty list; list some of python, c, onnx, table",
         ),
     ],
 )
@@ -274,44 +280,17 @@ def test_each_mistake_is_named_in_one_sentence(tmp_path: Path, old: str, new: st
             "term: functions of inputs are not there yet; add them to the rows as columns and name these as inputs",
         ),
         (
-            "[rows]\nweight = 'hours'",
-            "[rows]: weight: row weights are not there yet; remove the key: every row counts once",
+            "[prior.term.a]\nsign = 'negative'",
+            '[prior.term]: "a": sign: signs of weights are not there yet; '
+            "remove the key: mean and sd can keep a weight on one side",
         ),
         (
-            "[rows]\ngroup = 'pump'",
-            "[rows]: group: splits by group are not there yet; remove the key: rows are held out one by one",
+            "[prior]\nsd = 'evidence'",
+            f'[prior]: sd: found "evidence", which is not there yet; {NEED_SD}',
         ),
         (
-            "[[input]]\nname = 'a'\ncounts = { bits = 12 }",
-            '[[input]] "a": counts: inputs in counts are not there yet; '
-            "remove the key: the device passes the value in its unit",
-        ),
-        (
-            "[[input]]\nname = 'a'\norigin = 101.3",
-            '[[input]] "a": origin: origins are not there yet; remove the key: the device passes the value itself',
-        ),
-        (
-            "[prior.term.a]\nsd = 1",
-            "[prior]: term: priors of single terms are not there yet; remove the table: sd holds for every weight",
-        ),
-        (
-            "[decision]\nprevalence = 0.02",
-            "[decision]: prevalence: a prevalence in the field is not there yet; "
-            "remove the key: the share of events in the rows holds",
-        ),
-        (
-            "[decision]\nno_call = 0.0",
-            "[decision]: no_call: a no-call is not there yet; remove the key: every row is decided",
-        ),
-        (
-            "[device]\ncompiler = 'cc'",
-            "[device]: compiler: a compiler of your own is not there yet; "
-            "remove the key: the C header is checked with gcc and clang",
-        ),
-        (
-            "[release]\nreal_rows = false",
-            "[release]: real_rows: real rows in a release are not there yet; "
-            "remove the key: vectors are invented within the ranges",
+            "[rows]\nclasses = ['a', 'b', 'c']",
+            f"[rows]: classes: found 3: more than two are not there yet; {NEED_CLASSES}",
         ),
     ],
 )
@@ -321,9 +300,7 @@ def test_what_is_not_there_yet_is_refused_and_never_ignored(tmp_path: Path, tabl
 
 def test_number_where_a_table_belongs_is_refused(tmp_path: Path) -> None:
     assert problems_of(tmp_path, "prior = 3\n" + GOOD.partition("[prior]")[0]) == [
-        "prior: found 3, not a table; write [prior] on a line of its own",
-        "[prior]: sd: found nothing: choosing it from the rows is not there yet; "
-        "write sd = 1.0, a moderate prior on standardised weights, or another number, or inf",
+        "prior: found 3, not a table; write it as a table, with keys and values",
     ]
 
 

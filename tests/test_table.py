@@ -164,7 +164,7 @@ HUGE = "found a row of more than 1000000 bytes; look for missing line ends, or f
     ("text", "sentence"),
     [
         ("", "found no header; give a .csv with a header and rows"),
-        (HEADER, "found a header and no rows; give a .csv with rows"),
+        (HEADER, "found a header and no rows; give rows below it"),
         (
             "flow,wheel\n1,open\n",
             'line 1: found no column "state" for the label; name a column of the file in the plan',
@@ -251,12 +251,26 @@ def test_each_bad_file_is_named_in_one_sentence(tmp_path: Path, text: str | byte
         ),
         ("state\nx\ny\n", "line 1: found no column but the label; give a column for each input"),
         (
-            "a,b,state\n1,closed,x\n2,open,y\n",
-            f'line 2, column "b": found "closed", not a number; {NO_INPUTS}, text with levels',
+            "a,b,state\n1,2,x\n2,3,y\n3,n/a,y\n",
+            f'line 4, column "b": found "n/a", not a number; correct it, or {NO_INPUTS}, text with levels',
+        ),
+        (
+            "a,b,state\n1,2,x\n2,NaN,y\n3,3,y\n",
+            'line 3, column "b": found "NaN", not a finite number; leave the field empty where a value is missing',
+        ),
+        (
+            "a,b,state\n" + "".join(f"{at},text {at},{'xy'[at % 2]}\n" for at in range(21)),
+            f'column "b": found more than 20 different texts; remove the column, or {NO_INPUTS}',
         ),
         (
             "a,state\n3,x\n3,y\n",
-            'column "a": found 3 in every row; remove the input: a constant says nothing of the class',
+            'column "a": found 3 in every row; '
+            "remove the column, or name the others with [[input]]: a constant says nothing",
+        ),
+        (
+            "a,b,state\n1,on,x\n2,on,y\n",
+            'column "b": found "on" in every row; '
+            "remove the column, or name the others with [[input]]: a constant says nothing",
         ),
         (
             "2nd,state\n1,x\n2,y\n",
@@ -268,7 +282,7 @@ def test_each_bad_file_is_named_in_one_sentence(tmp_path: Path, text: str | byte
         ),
         (
             "a,state\n1e39,x\n2e39,y\n",
-            'column "a": found 9e+38, too large for binary32; write a range in the plan, or another arithmetic',
+            'column "a": found 9e+38, too large for binary32, a tenth beyond the rows; write a range in the plan, or another arithmetic',
         ),
     ],
 )
@@ -295,10 +309,10 @@ def test_no_file_and_a_folder_are_told_apart(tmp_path: Path) -> None:
     rows_of(tmp_path, GOOD)
     plan = read_plan(tmp_path / "plan.toml")
     plan.rows.file.unlink()
-    with pytest.raises(RowsError, match=r"runs\.csv: found no such file; give the path of a \.csv$"):
+    with pytest.raises(RowsError, match=r"runs\.csv: found no such file; give the path of the rows$"):
         read_rows(plan)
     plan.rows.file.mkdir()
-    with pytest.raises(RowsError, match=r"runs\.csv: found a folder; give the path of a \.csv$"):
+    with pytest.raises(RowsError, match=r"runs\.csv: found a folder; give the path of the rows$"):
         read_rows(plan)
 
 

@@ -1,24 +1,36 @@
-"""Blocks of records -> numbers, one column at a time; what cannot be read becomes a problem, and reading goes on."""
+"""Blocks of rows -> numbers, one column at a time; what cannot be read becomes a problem, and reading goes on."""
 
 from __future__ import annotations
 
 import math
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
+from typing import Any, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
 
+from runtime_min.canonical import canonical
 from runtime_min.errors import Problem, RowsError
 from trainer.plan_checks import decimal_text, listed, shown
 
 PROBLEMS_SHOWN = 20
 
+MOST_LEVELS = 20
+"""A column of at most so many different texts is an input with levels, where the plan names no input."""
+
 Floats = npt.NDArray[np.float64]
-Record = tuple[int, list[str]]
-"""The line on which a record starts, and its fields."""
+Cells = list[str] | npt.NDArray[Any]
+"""One column of a block: texts, "" where missing, or an array of bools, integers or floats, NaN where missing."""
+
+
+class Block(NamedTuple):
+    """`lines`: the line, or the number, of each row; `cells`: the cells of the column at a position."""
+
+    lines: Sequence[int]
+    cells: Callable[[int], Cells]
 
 
 @dataclass
@@ -26,7 +38,11 @@ class Column:
     """One column that the plan uses, and the blocks of it read so far (NaN: missing).
 
     `codes` is None for a number; else it gives the index of each text, and `grows` lets new texts in. `limits`: what a
-    number may not leave. `refusal`: what to do about a text that is not read; `refuse_once`: say it for the first only.
+    number may not leave; `least`: what it may not be below; `one_of`: all that it may be. `refusal`: what to do about a
+    cell that is not read. `missing`: what to do about an empty field, where there may be none.
+
+    `either`: numbers or texts, which all rows together decide. Both are then kept: the number of each cell, NaN where
+    there is none, in `blocks`, its text's code in `text_blocks`; `first_text` is the first cell that is no number.
     """
 
     header: str
@@ -35,9 +51,14 @@ class Column:
     codes: dict[str, int] | None = None
     grows: bool = False
     limits: tuple[Fraction, Fraction] | None = None
-    may_be_missing: bool = True
-    refuse_once: bool = False
+    least: float | None = None
+    one_of: tuple[float, ...] | None = None
+    missing: str | None = None
+    either: bool = False
     blocks: list[Floats] = field(default_factory=list)
+    text_blocks: list[Floats] = field(default_factory=list)
+    first_text: tuple[str, str] | None = None
+    refused: set[str] = field(default_factory=set)
 
     def joined(self) -> Floats:
         return np.concatenate(self.blocks)
@@ -46,27 +67,31 @@ class Column:
 class Findings:
     """Problems as they are found; the first few of each column are kept, the others counted."""
 
-    def __init__(self, where: str) -> None:
-        self._where = where
-        self._kept: list[tuple[int, int, Problem]] = []
+    def __init__(self) -> None:
+        self._file, self._where, self._place = 0, "", "line"
+        self._kept: list[tuple[int, int, int, Problem]] = []
         self._counts: Counter[int] = Counter()
         self._last: list[Problem] = []
 
+    def begin(self, where: str, place: str) -> None:
+        """What is found from here on is in the file `where`, whose rows stand in a `place` ("line", "row")."""
+        self._file, self._where, self._place = self._file + 1, where, place
+
+    def here(self, line: int, column: Column | None) -> str:
+        return f"{self._where}: {self._place} {line}" + (f", column {shown(column.header)}" if column else "")
+
     def add(self, line: int, column: Column | None, found: str, todo: str) -> None:
-        position, place = (column.position, f", column {shown(column.header)}") if column else (-1, "")
+        position = column.position if column else -1
         self._counts[position] += 1
         if self._counts[position] <= PROBLEMS_SHOWN:
-            self._kept.append((line, position, Problem(f"{self._where}: line {line}{place}", found, todo)))
-
-    def count(self, column: Column) -> int:
-        return self._counts[column.position]
+            self._kept.append((self._file, line, position, Problem(self.here(line, column), found, todo)))
 
     def add_last(self, problems: Sequence[Problem]) -> None:
         """Problems after which nothing more can be read."""
         self._last.extend(problems)
 
     def raise_any(self) -> None:
-        first = [problem for _, _, problem in sorted(self._kept)[:PROBLEMS_SHOWN]]
+        first = [problem for *_, problem in sorted(self._kept)[:PROBLEMS_SHOWN]]
         more = self._counts.total() - len(first)
         if more:
             found = f"found {more} more problem{'s' if more > 1 else ''}"
@@ -75,47 +100,73 @@ class Findings:
             raise RowsError(first + self._last)
 
 
-def read_block(block: Sequence[Record], width: int, columns: Sequence[Column], findings: Findings) -> None:
-    """Append to each column the numbers of those records in `block` that have `width` fields."""
-    whole = [record for record in block if len(record[1]) == width]
-    if len(whole) < len(block):
-        todo = "give each row one field a column, in quotes where a field holds a comma"
-        for line, fields in block:
-            if len(fields) != width:
-                count = f"{len(fields)} field{'s' if len(fields) > 1 else ''}"
-                findings.add(line, None, f"found {count} where the header has {width}", todo)
-    lines = [line for line, _ in whole]
+def read_block(block: Block, columns: Sequence[Column], findings: Findings) -> None:
+    """Append to each column the numbers of its cells in `block`."""
     for column in columns:
-        cells = [fields[column.position] for _, fields in whole]
-        if column.codes is None:
-            values = _numbers(lines, cells, column, findings)
+        cells = block.cells(column.position)
+        if column.either:
+            values, codes = _either(block.lines, cells, column, findings)
+            column.text_blocks.append(codes)
+        elif column.codes is None:
+            values = _numbers(block.lines, cells, column, findings)
         else:
-            values = _indexes(lines, cells, column, column.codes, findings)
-        if not column.may_be_missing:
-            for at in np.flatnonzero([not cell for cell in cells]):
-                findings.add(lines[at], column, "found an empty field", "write the class, or remove the row")
+            values = _indexes(block.lines, texts_of(cells), column, column.codes, findings)
+        if column.missing:
+            empty = [not cell for cell in cells] if isinstance(cells, list) else np.isnan(cells)
+            for at in np.flatnonzero(empty).tolist():
+                findings.add(block.lines[at], column, "found an empty field", column.missing)
         column.blocks.append(values)
 
 
-def _numbers(lines: list[int], cells: list[str], column: Column, findings: Findings) -> Floats:
+def texts_of(cells: Cells) -> list[str]:
+    """Each cell as a text: a number as canonical JSON has it (1, not 1.0), a bool as false or true."""
+    if isinstance(cells, list):
+        return cells
+    known: dict[Any, str] = {}
+    texts = []
+    for value in cells.tolist():
+        text = known.get(value)
+        if text is None:
+            text = str(value) if isinstance(value, int) and not isinstance(value, bool) else _text_of(value)
+            known[value] = text
+        texts.append(text)
+    return texts
+
+
+def _text_of(value: bool | float) -> str:
+    if isinstance(value, bool) or math.isfinite(value):
+        return canonical(value)
+    return "" if value != value else str(value)
+
+
+def _numbers(lines: Sequence[int], cells: Cells, column: Column, findings: Findings) -> Floats:
     values = _converted(cells)
-    for at in np.flatnonzero(~np.isfinite(values)):
-        if cells[at]:
-            if not (column.refuse_once and findings.count(column)):
-                findings.add(lines[at], column, *_not_a_number(cells[at], column.refusal))
+    for at in np.flatnonzero(~np.isfinite(values)).tolist():
+        cell = cells[at] if isinstance(cells, list) else texts_of(cells[at : at + 1])[0]
+        if cell:
+            findings.add(lines[at], column, *not_a_number(cell, column.refusal))
             values[at] = np.nan
     if column.limits:
         low, high = column.limits
         # A row is in range when its binary64 lies within the limits rounded to binary64.
         inside = (float(low) <= values) & (values <= float(high))
-        for at in np.flatnonzero(~(inside | np.isnan(values))):
+        for at in np.flatnonzero(~(inside | np.isnan(values))).tolist():
             found = f"found {shown_number(values[at])}, outside the range {decimal_text(low)} to {decimal_text(high)}"
             findings.add(lines[at], column, found, 'correct it, widen the range, or write outside = "clamp"')
+    wrong = np.zeros(len(values), dtype=bool)
+    if column.least is not None:
+        wrong = values < column.least
+    if column.one_of is not None:
+        wrong = ~np.isin(values, column.one_of) & ~np.isnan(values)
+    for at in np.flatnonzero(wrong).tolist():
+        findings.add(lines[at], column, f"found {shown_number(values[at])}", column.refusal)
     return values
 
 
-def _converted(cells: list[str]) -> Floats:
+def _converted(cells: Cells) -> Floats:
     """Each cell as binary64; NaN where it is missing or no number."""
+    if not isinstance(cells, list):
+        return cells.astype(np.float64)
     together = "".join(cells)
     # float() reads more than a number in a file may be: 1_000, and the digits of other scripts.
     if together.isascii() and "_" not in together:
@@ -135,7 +186,8 @@ def _number(cell: str) -> float:
         return math.nan
 
 
-def _not_a_number(cell: str, refusal: str) -> tuple[str, str]:
+def not_a_number(cell: str, refusal: str) -> tuple[str, str]:
+    """(what was found, what to do) of a cell that is no finite number."""
     if cell.strip().lower().lstrip("+-") in ("nan", "inf", "infinity"):
         return f"found {shown(cell)}, not a finite number", "leave the field empty where a value is missing"
     if math.isinf(_number(cell)):
@@ -143,16 +195,37 @@ def _not_a_number(cell: str, refusal: str) -> tuple[str, str]:
     return f"found {shown(cell)}, not a number", refusal
 
 
-def _indexes(lines: list[int], cells: list[str], column: Column, codes: dict[str, int], findings: Findings) -> Floats:
+def _indexes(
+    lines: Sequence[int], cells: list[str], column: Column, codes: dict[str, int], findings: Findings
+) -> Floats:
     if column.grows:
         for cell in cells:
             if cell and cell not in codes:
                 codes[cell] = len(codes)
     values = np.array([codes.get(cell, math.nan) for cell in cells], np.float64)
-    for at in np.flatnonzero(np.isnan(values)):
-        if cells[at]:
+    for at in np.flatnonzero(np.isnan(values)).tolist():
+        if cells[at] and cells[at] not in column.refused:  # each text once, where it stands first
+            column.refused.add(cells[at])
             findings.add(lines[at], column, f"found {shown(cells[at])}, not one of {listed(codes)}", column.refusal)
     return values
+
+
+def _either(lines: Sequence[int], cells: Cells, column: Column, findings: Findings) -> tuple[Floats, Floats]:
+    """(numbers, codes of texts). More texts than can be levels are not all kept: one too many is enough to tell."""
+    values = _converted(cells)
+    finite = np.isfinite(values)
+    if finite.all():
+        return values, np.full(len(values), np.nan)
+    codes = {} if column.codes is None else column.codes
+    column.codes = codes
+    texts = texts_of(cells)
+    for at in np.flatnonzero(~finite).tolist():
+        if texts[at]:
+            if column.first_text is None:
+                column.first_text = (findings.here(lines[at], column), texts[at])
+            if len(codes) <= MOST_LEVELS:
+                codes.setdefault(texts[at], len(codes))
+    return np.where(finite, values, np.nan), np.array([codes.get(text, math.nan) for text in texts])
 
 
 def shown_number(value: float) -> str:

@@ -61,12 +61,14 @@ class Section:
         """The table under `key`; an empty one if there is none. `mark`: what it is called where that is not [key]."""
         value = self.table.get(key, {})
         if not isinstance(value, dict):
-            self.report(key, f"found {shown(value)}, not a table", f"write [{key}] on a line of its own")
+            self.report(key, f"found {shown(value)}, not a table", "write it as a table, with keys and values")
             value = {}
+        if not mark and self.where.endswith("]"):  # of a table: [release], [release.table]
+            return Section(f"{self.where[:-1]}.{key}]", value, self.problems)
         return Section(f"{self.where}: {mark or f'[{key}]'}", value, self.problems)
 
     def text(self, key: str, default: str | None, todo: str = "write a text in quotes") -> str:
-        """A text of printable characters and line breaks, empty only where `default` is; None: the key is needed."""
+        """A text, empty only where `default` is; None: the key is needed."""
         value = self.table.get(key, default)
         if value is None:
             self.report(key, "found nothing", todo)
@@ -74,8 +76,6 @@ class Section:
             self.report(key, f"found {shown(value)}, not a text", todo)
         elif default != "" and not value.strip():
             self.report(key, "found an empty text", todo)
-        elif not all(character.isprintable() or character == "\n" for character in value):
-            self.report(key, f"found a control character in {shown(value)}", "remove it")
         else:
             return value
         return ""
@@ -92,8 +92,6 @@ class Section:
                 self.report(key, f"found {shown(text)}, not a text", "write it in quotes, as it stands in the file")
             elif not text.strip():
                 self.report(key, "found an empty text", "name it: an empty field is a missing value")
-            elif not text.isprintable():
-                self.report(key, f"found a control character in {shown(text)}", "remove it")
             elif text in value[:position]:
                 self.report(key, f"found {shown(text)} twice", "name it once")
         return tuple(value) if len(self.problems) == before else ()
@@ -187,7 +185,8 @@ def listed(texts: Iterable[str]) -> str:
 def shown(value: object) -> str:
     """What a file holds, in one short line."""
     if isinstance(value, str) and not isinstance(value, Unreadable):
-        return json.dumps(shortened(value), ensure_ascii=False)
+        quoted = json.dumps(shortened(value), ensure_ascii=False)
+        return quoted if quoted.isprintable() else "".join(map(_printable, quoted))
     if isinstance(value, bool):
         return "true" if value else "false"
     if isinstance(value, int):
@@ -199,6 +198,10 @@ def shown(value: object) -> str:
     if isinstance(value, list):
         return f"a list of {len(value)}"
     return "a table" if isinstance(value, dict) else shortened(str(value))
+
+
+def _printable(character: str) -> str:
+    return character if character.isprintable() else json.dumps(character)[1:-1].replace("\x7f", "\\u007f")
 
 
 def shortened(text: str) -> str:

@@ -1,4 +1,4 @@
-"""A CSV file -> records, one at a time, in bounded memory (RFC 4180; UTF-8; LF or CRLF; a byte order mark is fine).
+"""A CSV file -> records, in blocks, in bounded memory (RFC 4180; UTF-8; LF or CRLF; a byte order mark is fine).
 
 Stops at the first mistake after which fields can no longer be told apart, by raising RowsError with one problem. Knows
 nothing of plans, and converts nothing.
@@ -9,15 +9,18 @@ from __future__ import annotations
 import csv
 import hashlib
 from collections.abc import Iterator
+from itertools import islice
 from pathlib import Path
 from typing import BinaryIO
 
 from runtime_min.errors import Problem, RowsError
+from trainer.cells import Block, Findings
 
 LONGEST_RECORD = 1_000_000
 """Bytes of one record, its line breaks included."""
 
 MOST_COLUMNS = 4096
+_BLOCK_RECORDS = 4096
 
 # What the csv module says of a broken record -> our sentence.
 _BROKEN = (
@@ -28,17 +31,42 @@ _BROKEN = (
 )
 
 
-def opened(path: Path) -> BinaryIO:
-    """The file at `path`. Raises RowsError where there is none to read."""
-    where, todo = str(path), "give the path of a .csv"
-    try:
-        if path.is_dir():
-            raise RowsError(Problem(where, "found a folder", todo))
-        return path.open("rb")
-    except FileNotFoundError:
-        raise RowsError(Problem(where, "found no such file", todo)) from None
-    except OSError as error:
-        raise RowsError(Problem(where, f"cannot be read ({error.strerror})", "make it readable")) from None
+class CsvFile:
+    """A CSV file as a source of rows; a problem names the line on which its row starts."""
+
+    place = "line"
+
+    def __init__(self, path: Path, stream: BinaryIO) -> None:
+        self.where = str(path)
+        self._lines = Lines(stream, self.where)
+        self._records = records(self._lines)
+        _, self.header = next(self._records, (1, []))
+        if not self.header:
+            raise RowsError(Problem(self.where, "found no header", "give a .csv with a header and rows"))
+
+    def blocks(self, findings: Findings) -> Iterator[Block]:
+        """The rows that have as many fields as the header; the others become problems."""
+        width = len(self.header)
+        todo = "give each row one field a column, in quotes where a field holds a comma"
+        while block := list(islice(self._records, _BLOCK_RECORDS)):
+            whole = [record for record in block if len(record[1]) == width]
+            for line, fields in block if len(whole) < len(block) else ():
+                if len(fields) != width:
+                    count = f"{len(fields)} field{'s' if len(fields) > 1 else ''}"
+                    findings.add(line, None, f"found {count} where the header has {width}", todo)
+            yield Block([line for line, _ in whole], _Fields(whole))
+
+    def sha256(self) -> str:
+        """Of the file's bytes, all of which were read."""
+        return self._lines.sha256
+
+
+class _Fields:
+    def __init__(self, rows: list[tuple[int, list[str]]]) -> None:
+        self._rows = rows
+
+    def __call__(self, position: int) -> list[str]:
+        return [fields[position] for _, fields in self._rows]
 
 
 class Lines:

@@ -37,6 +37,7 @@ def request_of(plan: Plan, rows: Rows) -> Request:
         tolerance=_text(plan.device.tolerance),
         compiler=plan.device.compiler,
         real_rows=plan.real_rows,
+        part=plan.device.part,
     )
 
 

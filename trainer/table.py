@@ -1,31 +1,30 @@
-"""Rows from a CSV file, checked against the plan, in blocks: one pass, every mistake reported at once.
+"""Rows from files, checked against the plan, in blocks: one pass, every mistake reported at once.
 
-A problem names the line on which its row starts. `records` knows the file format, `cells` what is a number; here stand
-the header, what the rows give where the plan is silent, and which rows are kept.
+`sources` knows the files, `columns` which of their columns the plan uses, `cells` what is a number; here stands which
+rows are kept, and what they give where the plan is silent.
 """
 
 from __future__ import annotations
 
-import difflib
-from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
-from itertools import islice
 
 import numpy as np
 import numpy.typing as npt
 
 from runtime_min.errors import Problem, RowsError
-from runtime_min.names import c_input_name, name_and_unit, name_problem
-from trainer.cells import Column, Findings, Floats, read_block, shown_number
+from trainer.cells import Findings, Floats, read_block, shown_number
+from trainer.columns import Columns, columns_of_plan, settled
 from trainer.plan import InputPlan, Plan
-from trainer.plan_checks import listed, range_problem, shown
-from trainer.records import Lines, opened, records
+from trainer.plan_checks import listed, shown
+from trainer.plan_inputs import device_range_problem
+from trainer.plan_prior import term_problems
+from trainer.sources import digest_of, opened, row_files
 from trainer.split import row_keys
 
-_BLOCK_RECORDS = 4096
-_NAME_ALL = "name every input with [[input]] in the plan"
+_MOST_WEIGHT = 2.0**1000
+"""Sums of weights up to this do not overflow."""
 
 
 @dataclass(frozen=True)
@@ -37,7 +36,7 @@ class Rows:
     where a value is missing and the plan says `missing = "typical"`: the fit puts in what is typical of its rows.
     `labels`: (n,) class index.
     `keys`: what `split` tells rows apart by, without the seed; from values as parsed, before clamping.
-    `dropped`: rows left out for a value missing under `missing = "fault"`; `total`: rows in the file.
+    `dropped`: rows left out for a value missing under `missing = "fault"`; `total`: rows in the files.
     `sha256`: of the file's bytes; of several files, of the lines of their digests in the order of their names.
     `weights`: (n,) > 0; a row of weight 0 is read and counted in `total`, then left out, so that it has no influence.
     `groups`: (n,) the group's text. `held_out`: (n,) True where the plan's column of held-out rows has 1.
@@ -58,115 +57,119 @@ class Rows:
 
 
 def read_rows(plan: Plan) -> Rows:
-    """The rows of the plan's file. Raises RowsError with every problem; of many, the first 20 and a count."""
+    """The rows of the plan's files. Raises RowsError with every problem; of many, the first 20 and a count."""
     where = str(plan.rows.file)
-    with opened(plan.rows.file) as stream:
-        lines = Lines(stream, where)
-        table = records(lines)
-        _, header = next(table, (1, []))
-        if not header:
-            raise RowsError(Problem(where, "found no header", "give a .csv with a header and rows"))
-        inputs, label, measured = _columns(plan, header, where)
-        findings = Findings(where)
-        total = 0
-        try:
-            while block := list(islice(table, _BLOCK_RECORDS)):
-                total += len(block)
-                read_block(block, len(header), [label, *measured], findings)
-        except RowsError as broken:
-            findings.add_last(broken.problems)
-    findings.raise_any()
-    if not total:
-        raise RowsError(Problem(where, "found a header and no rows", "give a .csv with rows"))
+    try:
+        columns, total, sha256 = _read(plan, where)
+        return _kept(plan, columns, total, sha256, where)
+    except MemoryError:
+        raise RowsError(Problem(where, "found more rows than memory holds", "give fewer rows")) from None
 
-    values = np.column_stack([column.joined() for column in measured])
+
+def _read(plan: Plan, where: str) -> tuple[Columns, int, str]:
+    """(the columns that the plan uses, read; the number of rows; the digest)."""
+    findings = Findings()
+    columns: Columns | None = None
+    header: list[str] = []
+    digests = []
+    total = 0
+    for path in row_files(plan.rows.file, plan.path.parent):
+        with opened(path) as source:
+            findings.begin(source.where, source.place)
+            if columns is None:
+                header = source.header
+                columns = columns_of_plan(plan, header, _header_place(source.where, source.place))
+            elif source.header != header:
+                found, todo = _difference(header, source.header)
+                findings.add_last([Problem(_header_place(source.where, source.place), found, todo)])
+                continue
+            try:
+                for block in source.blocks(findings):
+                    total += len(block.lines)
+                    read_block(block, columns.all(), findings)
+            except RowsError as broken:
+                findings.add_last(broken.problems)
+                continue
+            digests.append(source.sha256())
+    findings.raise_any()
+    if not total or columns is None:
+        raise RowsError(Problem(where, "found a header and no rows", "give rows below it"))
+    return columns, total, digest_of(digests)
+
+
+def _header_place(where: str, place: str) -> str:
+    return f"{where}: line 1" if place == "line" else where
+
+
+def _difference(first: Sequence[str], other: Sequence[str]) -> tuple[str, str]:
+    todo = "give files with the same columns in the same order"
+    if missing := [name for name in first if name not in other]:
+        return f"found no column {listed(missing)}, which the first file has", todo
+    if more := [name for name in other if name not in first]:
+        return f"found the column {listed(more)}, which the first file has not", todo
+    return "found the columns of the first file in another order", todo
+
+
+def _kept(plan: Plan, columns: Columns, total: int, sha256: str, where: str) -> Rows:
+    inputs, measured = settled(columns, where)
+    values = np.column_stack(measured)
     at_fault = np.array([entry.missing == "fault" for entry in inputs])
-    kept = ~np.any(np.isnan(values) & at_fault, axis=1)
+    present = ~np.any(np.isnan(values) & at_fault, axis=1)
+    kept = present
+    weights = None
+    if columns.weight:
+        weights = _weights(columns.weight.joined(), f"{where}: column {shown(columns.weight.header)}", present)
+        kept = present & (weights > 0)
+        weights = weights[kept]
     values = values[kept]
-    classes, labels = _labels(plan, label, kept, where)
+    classes, labels = _labels(plan, columns, present, kept, where)
     inputs = _completed(plan, inputs, values, where)
+    if problems := term_problems(str(plan.path), plan.prior, inputs):
+        raise RowsError(problems)
     parsed = [_parsed(entry, column) for entry, column in zip(inputs, values.T, strict=True)]
-    keys = row_keys([classes[index] for index in labels], parsed)
+    keys = row_keys([classes[index] for index in labels], parsed, None if weights is None else weights.tolist())
     for position, entry in enumerate(inputs):
         if entry.outside == "clamp" and entry.low is not None and entry.high is not None:
             values[:, position] = np.clip(values[:, position], float(entry.low), float(entry.high))
-    values.flags.writeable = labels.flags.writeable = False
-    return Rows(inputs, classes, values, labels, keys, int(np.sum(~kept)), total, lines.sha256)
+    groups = None
+    if columns.group:
+        names = list(columns.group.codes or ())
+        groups = tuple(names[int(code)] for code in columns.group.joined()[kept])
+    held_out = None
+    if columns.held_out:
+        held_out = columns.held_out.joined()[kept] == 1
+        _refuse_bad_split(held_out, groups, f"{where}: column {shown(columns.held_out.header)}")
+    for array in (values, labels, weights, held_out):
+        if array is not None:
+            array.flags.writeable = False
+    dropped = int(np.sum(~present))
+    return Rows(inputs, classes, values, labels, keys, dropped, total, sha256, weights, groups, held_out)
 
 
-def _columns(plan: Plan, header: list[str], where: str) -> tuple[tuple[InputPlan, ...], Column, list[Column]]:
-    """(the inputs, the label's column, one column an input)."""
-    place = f"{where}: line 1"
-    problems = [
-        Problem(place, f"found {count} columns named {shown(name)}", "rename all but one")
-        for name, count in Counter(header).items()
-        if count > 1 and name
-    ]
-    label_position = _position(plan.rows.label, header, place, "the label", problems)
-    inputs = plan.inputs or _inputs_of(header, plan.rows.label, place, problems)
-    positions = [_position(entry.column, header, place, f"input {shown(entry.name)}", problems) for entry in inputs]
-    if problems:
-        raise RowsError(problems)
-    classes = plan.rows.classes
-    label = Column(
-        plan.rows.label,
-        label_position,
-        "correct it, or remove the row",
-        codes={text: index for index, text in enumerate(classes or ())},
-        grows=classes is None,
-        may_be_missing=False,
-    )
-    named = bool(plan.inputs)
-    measured = [_measured(entry, position, named) for entry, position in zip(inputs, positions, strict=True)]
-    return inputs, label, measured
+def _weights(weights: Floats, place: str, present: npt.NDArray[np.bool_]) -> Floats:
+    if not weights[present].any() and present.any():
+        raise RowsError(Problem(place, f"found 0 in each of {int(present.sum())} rows", "give some rows a weight"))
+    if not float(weights.max()) * len(weights) <= _MOST_WEIGHT:
+        found = f"found {shown_number(weights.max())}, too large to be summed"
+        raise RowsError(Problem(place, found, "scale the weights down"))
+    return weights
 
 
-def _measured(entry: InputPlan, position: int, named: bool) -> Column:
-    if entry.levels:
-        codes = {text: index for index, text in enumerate(entry.levels)}
-        return Column(entry.column, position, "correct it, or add it to levels", codes=codes)
-    if named:
-        limits = None
-        if entry.outside == "fault" and entry.low is not None and entry.high is not None:
-            limits = (entry.low, entry.high)
-        todo = "correct it, or leave the field empty where a value is missing"
-        return Column(entry.column, position, todo, limits=limits)
-    return Column(entry.column, position, f"{_NAME_ALL}, text with levels", refuse_once=True)
-
-
-def _position(name: str, header: list[str], place: str, what: str, problems: list[Problem]) -> int:
-    if name in header:
-        return header.index(name)
-    near = difflib.get_close_matches(name, header, n=1)
-    todo = f"write {shown(near[0])} in the plan if that is meant" if near else "name a column of the file in the plan"
-    problems.append(Problem(place, f"found no column {shown(name)} for {what}", todo))
-    return -1
-
-
-def _inputs_of(header: list[str], label: str, place: str, problems: list[Problem]) -> tuple[InputPlan, ...]:
-    """Every column but the label as a number: for a plan that names no input."""
-    inputs: list[InputPlan] = []
-    spelled: dict[str, str] = {}
-    for column in header:
-        if column == label:
-            continue
-        name, unit = name_and_unit(column)
-        in_c = c_input_name(name, unit)
-        if problem := name_problem(name):
-            problems.append(Problem(place, f"{problem}, for the header {shown(column)}", _NAME_ALL))
-        elif spelled.setdefault(in_c, column) != column:
-            found = f"found the headers {shown(spelled[in_c])} and {shown(column)}, both {in_c} in C"
-            problems.append(Problem(place, found, _NAME_ALL))
-        inputs.append(InputPlan(name, column, unit, None, None, "fault", "fault", (), assumed=True))
-    if not inputs:
-        problems.append(Problem(place, "found no column but the label", "give a column for each input"))
-    return tuple(inputs)
+def _refuse_bad_split(held_out: npt.NDArray[np.bool_], groups: tuple[str, ...] | None, place: str) -> None:
+    if held_out.all():
+        raise RowsError(Problem(place, f"found 1 in each of {len(held_out)} rows", "write 0 for the rows to fit"))
+    if groups is not None:
+        sides = [{group for group, out in zip(groups, held_out, strict=True) if out == side} for side in (True, False)]
+        if both := sorted(sides[0] & sides[1]):
+            found = f"found 0 and 1 in the group {listed(both)}"
+            raise RowsError(Problem(place, found, "hold out whole groups"))
 
 
 def _labels(
-    plan: Plan, label: Column, kept: npt.NDArray[np.bool_], where: str
+    plan: Plan, columns: Columns, present: npt.NDArray[np.bool_], kept: npt.NDArray[np.bool_], where: str
 ) -> tuple[tuple[str, ...], npt.NDArray[np.int64]]:
     """(the class names, the class of each kept row). Classes that the plan does not name are sorted."""
+    label = columns.label
     place = f"{where}: column {shown(label.header)}"
     found_names = list(label.codes or ())
     classes = plan.rows.classes or tuple(sorted(found_names))
@@ -175,14 +178,15 @@ def _labels(
         raise RowsError(Problem(place, found, "name two with classes, and remove the rows of the others"))
     places = np.array([classes.index(name) for name in found_names], np.int64)
     labels = places[label.joined().astype(np.int64)][kept]
-    if not len(labels):
+    if not present.any():
         found = f"found a value missing in each of {len(kept)} rows"
         raise RowsError(Problem(where, found, 'write missing = "typical" for the inputs that are often missing'))
     missing = [name for index, name in enumerate(classes) if not np.any(labels == index)]
     if len(classes) < 2:
         raise RowsError(Problem(place, f"found only the class {shown(classes[0])}", "give rows of two classes"))
     if missing:
-        found = f"found no row of the class {listed(missing)} among the {len(labels)} that miss no value"
+        weighed = "" if columns.weight is None else " and have a weight above 0"
+        found = f"found no row of the class {listed(missing)} among the {len(labels)} that miss no value{weighed}"
         raise RowsError(Problem(place, found, "give rows of both classes"))
     return classes, labels
 
@@ -192,23 +196,25 @@ def _completed(plan: Plan, inputs: Sequence[InputPlan], values: Floats, where: s
     problems: list[Problem] = []
     completed = []
     for entry, column in zip(inputs, values.T, strict=True):
+        place = f"{where}: column {shown(entry.column)}"
+        seen = column[~np.isnan(column)]
+        remove = "remove the input" if plan.inputs else "remove the column, or name the others with [[input]]"
+        if not len(seen):
+            problems.append(Problem(place, "found no value", remove))
+            continue
+        least, largest = float(seen.min()), float(seen.max())
+        if least == largest:
+            same = shown(entry.levels[int(least)]) if entry.levels else shown_number(least)
+            problems.append(Problem(place, f"found {same} in every row", f"{remove}: a constant says nothing"))
+            continue
         if entry.levels or entry.low is not None:
             completed.append(entry)
             continue
-        place = f"{where}: column {shown(entry.column)}"
-        present = column[~np.isnan(column)]
-        if not len(present):
-            problems.append(Problem(place, "found no value", "remove the input"))
-            continue
-        least, largest = float(present.min()), float(present.max())
-        if least == largest:
-            found = f"found {shown_number(least)} in every row"
-            problems.append(Problem(place, found, "remove the input: a constant says nothing of the class"))
-            continue
         tenth = (Fraction(largest) - Fraction(least)) / 10
         low, high = Fraction(least) - tenth, Fraction(largest) + tenth
-        if problem := range_problem(low, high, plan.device.arithmetic):
-            problems.append(Problem(place, problem[0], "write a range in the plan, or another arithmetic"))
+        if problem := device_range_problem(low, high, entry.origin, entry.counts, plan.device.arithmetic):
+            todo = "write a range in the plan, or another arithmetic"
+            problems.append(Problem(place, f"{problem[0]}, a tenth beyond the rows", todo))
         completed.append(replace(entry, low=low, high=high, assumed=True))
     if problems:
         raise RowsError(problems)
