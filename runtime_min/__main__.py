@@ -1,6 +1,10 @@
 """Score a CSV with nothing but Python: ``python -m runtime_min SEALED ROWS.csv``.
 
-Writes the rows' inputs, log_odds, probability, decision and model_id as CSV to standard output.
+The rows hold values in the plan's units, whatever the device delivers: where it delivers value - origin or a count,
+each value is converted exactly from its decimal (to the nearest count, ties to even), as the device's reading would be.
+
+Writes the rows' inputs as they were given, log_odds, probability, decision and model_id, as CSV to standard output.
+In integers log_odds and probability are the device's integers, in units of 2^-accumulator_shift and 2^-15.
 """
 
 from __future__ import annotations
@@ -9,35 +13,44 @@ import csv
 import math
 import sys
 from collections.abc import Iterator
+from decimal import Decimal
+from fractions import Fraction
 from pathlib import Path
 from typing import TextIO
 
 from runtime_min import score
 from runtime_min.codec import load
 from runtime_min.errors import FirmlogitError, Problem, RowsError
-from runtime_min.model import SealedModel
+from runtime_min.folding import delivered
+from runtime_min.model import INTEGERS, Input, SealedModel
 
-USAGE = "usage: python -m runtime_min SEALED ROWS.csv"
+USAGE = """usage: python -m runtime_min SEALED ROWS.csv
+ROWS.csv holds values in the plan's units; where the device delivers counts or values above an origin, they are
+converted."""
+
+Read = tuple[float, float]
+"""(the value in the plan's unit, what the device delivers)."""
 
 
 def score_rows(sealed: SealedModel, path: Path, out: TextIO) -> None:
     """Score every row of a CSV (columns by input name or by the plan's header) and write the scored rows to `out`.
 
-    An empty field is a missing value; a level stands as its name or its position. Raises RowsError before anything is
-    written, with every problem of the file.
+    Values are in the plan's units; an empty field is a missing value; a level stands as its name or its position.
+    Raises RowsError before anything is written, with every problem of the file.
     """
     rows = list(_read(sealed, path))
     writer = csv.writer(out, lineterminator="\n")
     writer.writerow([*(entry.name for entry in sealed.inputs), "log_odds", "probability", "decision", "model_id"])
-    for row in rows:
+    for given in rows:
+        row = [device for _, device in given]
         fault = score.check_inputs(sealed, row)
         z, p = score.log_odds(sealed, row), score.probability(sealed, row)
-        shown = ["" if math.isnan(value) else repr(value) for value in row]
+        shown = ["" if math.isnan(value) else repr(value) for value, _ in given]
         results = ["", ""] if fault else [repr(z), repr(p)]
         writer.writerow([*shown, *results, score.decide(sealed, row), sealed.model_id])
 
 
-def _read(sealed: SealedModel, path: Path) -> Iterator[tuple[float, ...]]:
+def _read(sealed: SealedModel, path: Path) -> Iterator[tuple[Read, ...]]:
     where = str(path)
     problems: list[Problem] = []
     try:
@@ -52,7 +65,7 @@ def _read(sealed: SealedModel, path: Path) -> Iterator[tuple[float, ...]]:
                     continue
                 values = []
                 for entry, place in zip(sealed.inputs, places, strict=True):
-                    value = _number(row[place], entry.levels)
+                    value = _number(row[place], entry, sealed.arithmetic)
                     if value is None:
                         at = f'{where}: line {lines.line_num}: column "{header[place]}"'
                         problems.append(Problem(at, f'found "{row[place]}"', "give a number or a level"))
@@ -84,15 +97,23 @@ def _places(sealed: SealedModel, header: list[str], where: str) -> list[int]:
     return places
 
 
-def _number(field: str, levels: tuple[str, ...]) -> float | None:
-    if field in levels:
-        return float(levels.index(field))
+def _number(field: str, entry: Input, arithmetic: str) -> Read | None:
+    if field in entry.levels:
+        level = float(entry.levels.index(field))
+        return level, level
     if field == "":
-        return math.nan
+        return math.nan, math.nan
     try:
-        return float(field) if field.isascii() and "_" not in field else None
+        value = float(field) if field.isascii() and "_" not in field else None
     except ValueError:
-        return None
+        value = None
+    if value is None or not math.isfinite(value) or entry.levels:
+        return None if value is None else (value, value)
+    if entry.origin is None and entry.counts is None and arithmetic not in INTEGERS:
+        return value, value
+    # A binary64 of 0 may stand for an exponent that no rational survives.
+    exact = Fraction(Decimal(field.strip())) if value else Fraction(0)
+    return value, delivered(entry, exact, arithmetic)
 
 
 def main(arguments: list[str]) -> int:

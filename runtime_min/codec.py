@@ -18,9 +18,9 @@ from dataclasses import fields, is_dataclass
 from pathlib import Path
 from typing import Any
 
-from runtime_min.canonical import canonical
+from runtime_min.canonical import LARGEST_PLAIN_INTEGER, canonical
 from runtime_min.errors import FileError, Problem
-from runtime_min.model import SealedModel, TrainedModel
+from runtime_min.model import INTEGERS, SealedModel, TrainedModel
 from runtime_min.validity import sealed_problems, trained_problems
 
 SEALED_FORMAT = "firmlogit sealed model 1"
@@ -56,7 +56,8 @@ def load(path: str | Path) -> SealedModel:
     where = str(path)
     parts = _read(Path(path), SEALED_FORMAT, ("model", "about"))
     joined = {**parts["model"], "about": parts["about"]} if isinstance(parts["model"], dict) else parts["model"]
-    sealed = _decode(SealedModel, joined, "model", where)
+    whole = isinstance(joined, dict) and joined.get("arithmetic") in INTEGERS
+    sealed = _decode(SealedModel, joined, "model", where, whole)
     _raise_if(sealed_problems(sealed), where)
     return typing.cast(SealedModel, sealed)
 
@@ -81,6 +82,8 @@ def _raise_if(problems: list[tuple[str, str, str]], where: str) -> None:
         raise FileError(Problem(f"{where}: {place}", found, todo) for place, found, todo in problems)
 
 
+# An integer beyond 2^53, as `canonical` writes it.
+_LONG_INTEGER = re.compile("-?[1-9][0-9]{15,39}")
 _SURROGATES = re.compile("[\ud800-\udfff]")
 _AGAIN = "take the file from the release again"
 
@@ -120,7 +123,8 @@ def _hints(kind: type) -> dict[str, Any]:
     return typing.get_type_hints(kind)
 
 
-def _decode(kind: type, value: Any, place: str, where: str) -> Any:
+def _decode(kind: type, value: Any, place: str, where: str, whole: bool = False) -> Any:
+    """The data class `kind` from plain data; with `whole`, every number of it is an int."""
     problems: list[Problem] = []
 
     def wrong(place: str, found: Any, expected: str) -> None:
@@ -154,6 +158,7 @@ def _decode(kind: type, value: Any, place: str, where: str) -> Any:
         return scalar(kind, value, place)
 
     def scalar(kind: Any, value: Any, place: str) -> Any:
+        kind = int if whole and kind is float else kind
         if kind is float and isinstance(value, (int, float)) and not isinstance(value, bool):
             try:
                 number = float(value)
@@ -162,7 +167,9 @@ def _decode(kind: type, value: Any, place: str, where: str) -> Any:
             return number if math.isfinite(number) else wrong(place, value, "a finite number")
         if kind is int and isinstance(value, int) and not isinstance(value, bool):
             return value
-        if kind is int and isinstance(value, float) and value.is_integer():
+        if kind is int and isinstance(value, float) and value.is_integer() and abs(value) <= LARGEST_PLAIN_INTEGER:
+            return int(value)
+        if kind is int and isinstance(value, str) and _LONG_INTEGER.fullmatch(value):
             return int(value)
         if kind is bool and isinstance(value, bool):
             return value

@@ -317,11 +317,13 @@ class Exponential:
 
 @dataclass(frozen=True)
 class Table:
-    """The logistic function for integers, in units of 2^-15: nodes at every 2^step units of the accumulator, from 0.
+    """The logistic function for integers, in units of 2^-15. See `integer_score.table_probability` for its use.
 
-    Between two nodes it is linear; beyond the last it is the last; below 0 it is 32768 less the value at -z.
+    The last `drop` bits of |z| are dropped; then nodes stand at every 2^step, from 0. Between two nodes it is linear;
+    beyond the last it is the last; below 0 it is 32768 less the value at -z.
     """
 
+    drop: int
     step: int
     nodes: tuple[int, ...]
 
@@ -341,8 +343,8 @@ class About:
 class SealedModel:
     """Every number that a device carries. `intercepts[k]` belongs to the log-odds of class k + 1 against class 0.
 
-    In floating point `exponential` is there and `accumulator_shift` and `table` are None. In integers every number is an
-    int, log-odds, intercepts, level weights and thresholds are in units of 2^-accumulator_shift, and `table` is there.
+    In floating point `exponential` is there and `accumulator_shift` and `table` are None. In integers every number is
+    an int; log-odds, intercepts, level weights and thresholds are in units of 2^-accumulator_shift; `table` is there.
     """
 
     name: str

@@ -1,16 +1,25 @@
 """The names that a plan may use, and the spelling that they take in C.
 
 A plan's name goes into Python, C and C++ unchanged, so it must be an identifier in all three, and no keyword in any.
-In C an input's position is an enumerator, `MODEL_IN_` followed by `c_input_name`: `PUMP_IN_FLOW_M3_PER_H`.
+In C an input's position is an enumerator, `MODEL_IN_` followed by `c_position_name`: `PUMP_IN_FLOW_M3_PER_H`. It says
+what the device delivers: `PUMP_IN_SUCTION_KPA_ABOVE_101_325`, `PUMP_IN_LEVEL_COUNTS`.
 """
 
 from __future__ import annotations
 
 import re
 import unicodedata
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from fractions import Fraction
+
+    from runtime_min.model import Input, InputRequest
 
 # C99 5.2.4.1: a compiler need only tell apart the first 63 characters of an internal identifier.
 LONGEST_NAME = 63
+
+LONGEST_DECIMAL = 24
 
 NAME_RULE = f"write lower-case letters, digits and single underscores, from a letter on, at most {LONGEST_NAME}"
 
@@ -93,6 +102,59 @@ def c_input_name(name: str, unit: str) -> str:
     """What follows `MODEL_IN_` for an input: "flow" in "m3/h" is "FLOW_M3_PER_H"; without a unit, "FLOW"."""
     suffix = unit_suffix(unit)
     return f"{name.upper()}_{suffix}" if suffix else name.upper()
+
+
+def c_position_name(entry: Input | InputRequest) -> str:
+    """What follows `MODEL_IN_` for an input as the device delivers it: with an origin, or as counts, it says so.
+
+    "suction" in "kPa" above 101.325 is "SUCTION_KPA_ABOVE_101_325", above -40 "SUCTION_KPA_ABOVE_MINUS_40"; as counts
+    it is "SUCTION_COUNTS".
+    """
+    if entry.counts is not None:
+        return f"{entry.name.upper()}_COUNTS"
+    name = c_input_name(entry.name, entry.unit)
+    if entry.origin is None:
+        return name
+    words = exact_decimal(_fraction(entry.origin)).upper()
+    for sign, word in (("E-", "E_MINUS_"), ("-", "MINUS_"), (".", "_"), ("/", "_OVER_")):
+        words = words.replace(sign, word)
+    return f"{name}_ABOVE_{words}"
+
+
+def delivered_unit(entry: Input | InputRequest) -> str:
+    """What the device delivers, in words: "kPa", "kPa above 101.325", "counts of 0.1 kPa from -95"; "" for no unit."""
+    if entry.counts is not None:
+        gain, offset = (exact_decimal(_fraction(text)) for text in (entry.counts.gain, entry.counts.offset))
+        return f"counts of {gain} {entry.unit}".rstrip() + f" from {offset}"
+    if entry.origin is None:
+        return entry.unit
+    return f"{entry.unit} above {exact_decimal(_fraction(entry.origin))}".lstrip()
+
+
+def exact_decimal(value: Fraction) -> str:
+    """`value` without rounding: as a decimal where it has one ("101.325", very long ones as "1e-30"), else "1/3"."""
+    rest, twos, fives = value.denominator, 0, 0
+    while rest % 2 == 0:
+        rest, twos = rest // 2, twos + 1
+    while rest % 5 == 0:
+        rest, fives = rest // 5, fives + 1
+    if rest != 1:
+        return str(value)
+    places = max(twos, fives)
+    digits = str(abs(value.numerator) * 10**places // value.denominator).rjust(places + 1, "0")
+    sign = "-" if value < 0 else ""
+    if len(digits) <= LONGEST_DECIMAL:
+        return sign + digits[: len(digits) - places] + ("." + digits[-places:] if places else "")
+    digits = digits.lstrip("0")
+    exponent = len(digits) - 1 - places
+    digits = digits.rstrip("0")
+    return f"{sign}{digits[0]}{'.' if digits[1:] else ''}{digits[1:]}e{exponent}"
+
+
+def _fraction(text: str) -> Fraction:
+    from fractions import Fraction  # loading a model without origins needs no rationals
+
+    return Fraction(text)
 
 
 def name_and_unit(header: str) -> tuple[str, str]:

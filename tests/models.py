@@ -15,6 +15,7 @@ from fractions import Fraction
 
 from runtime_min.model import (
     Certificate,
+    Counts,
     DecisionRequest,
     FittedRows,
     HeldOut,
@@ -28,7 +29,7 @@ from runtime_min.model import (
     TrainedTerm,
     Witness,
 )
-from runtime_min.sealing import seal_request
+from runtime_min.sealing import prevalence_shift, seal_request
 
 WEIGHT_GRID = 2.0**-30
 WITNESS_ROWS = 12
@@ -45,6 +46,8 @@ class Quantity:
     levels: tuple[str, ...] = ()
     outside: str = "fault"
     missing: str = "fault"
+    origin: str | None = None
+    counts: Counts | None = None
 
 
 SUCTION = Quantity("suction", "kPa", "-95", "250")
@@ -66,6 +69,7 @@ def make_trained(
     weight_sd: float = 1.0,
     intercept: float | None = None,
     with_held_out: bool = True,
+    prevalence: str | None = None,
 ) -> TrainedModel:
     """A valid trained model of two classes over `quantities`, its numbers drawn by `random.Random(seed)`.
 
@@ -104,6 +108,7 @@ def make_trained(
         rows=FittedRows(total=2700, dropped=12, fitted=2000, held_out=688, sha256="0" * 64),
         held_out=HeldOut(688, 170, 0.31, 0.09, 0.91, 0.25, 0.56, 0.19) if with_held_out else None,
         witness=(),
+        prevalence=prevalence,
     )
     return replace(trained, witness=_witness(trained, quantities, rng))
 
@@ -118,7 +123,8 @@ def make_request(
 ) -> Request:
     """What sealing is asked for; the quantities are those of `make_trained`."""
     inputs = tuple(
-        InputRequest(q.name, q.name, q.unit, q.levels, q.low, q.high, q.outside, q.missing, False) for q in quantities
+        InputRequest(q.name, q.name, q.unit, q.levels, q.low, q.high, q.outside, q.missing, False, q.origin, q.counts)
+        for q in quantities
     )
     return Request(model, arithmetic, inputs, decision, tolerance)
 
@@ -161,6 +167,38 @@ def sample_sealed_models() -> dict[str, tuple[TrainedModel, SealedModel]]:
     }
 
 
+# An absolute pressure in pascals, a time in seconds since 1970, and what converters of 12, 16 and 24 bits deliver.
+PRESSURE = Quantity("pressure", "Pa", "95000", "108000", origin="101325")
+CLOCK = Quantity("clock", "s", "1.6e9", "1700000000.5", outside="clamp", missing="typical", origin="1650000000")
+COLD = Quantity("cold", "°C", "-60", "-20", origin="-40.25")
+ADC = Quantity("adc", "kPa", "-95", "250", counts=Counts(12, "0.1", "-95", False, False))
+SHUNT = Quantity("shunt", "A", "-3", "2.5", (), "clamp", "typical", counts=Counts(16, "1/8192", "0", True, False))
+WIDE = Quantity("wide", "mV", "0", "2500", missing="typical", counts=Counts(24, "0.0002", "-0.5", False, False))
+FALLING = Quantity("falling", "°C", "-10", "85", (), "clamp", counts=Counts(10, "-0.11", "95.5", False, False))
+
+NO_CALL = DecisionRequest("1", "25", None, "0.75")
+
+
+def sample_extended_models() -> dict[str, tuple[TrainedModel, SealedModel]]:
+    """Floating point with origins, counts, a prevalence and a no-call, as (trained model, sealed model)."""
+    kinds = {
+        "origins": ([PRESSURE, CLOCK, COLD], {}, {}),
+        "counts": ([ADC, SHUNT, FALLING, IMPELLER], {}, {}),
+        "mixed": ([PRESSURE, ADC, FLOW, VALVE], {"prevalence": "0.02"}, {"decision": NO_CALL}),
+        "rare": ([SUCTION, FLOW], {"prevalence": "1/1000"}, {}),
+        "undecided": ([CURRENT, IMPELLER], {"intercept": 0.5}, {"decision": DecisionRequest(None, None, "0.1", "1")}),
+    }
+    models: dict[str, tuple[TrainedModel, SealedModel]] = {}
+    for seed, (kind, (quantities, trained, asked)) in enumerate(kinds.items()):
+        for arithmetic in ("binary32", "binary64"):
+            name = f"{kind}_{arithmetic}"
+            inputs = [*quantities, WIDE] if kind == "counts" else quantities
+            made = make_trained(inputs, 200 + seed, **trained)  # type: ignore[arg-type]
+            request = make_request(inputs, model=name, arithmetic=arithmetic, **asked)  # type: ignore[arg-type]
+            models[name] = made, seal_request(made, request, "Early warning of cavitation (invented numbers)")
+    return models
+
+
 def _limits(quantity: Quantity) -> tuple[float, float]:
     return float(Fraction(str(quantity.low))), float(Fraction(str(quantity.high)))
 
@@ -186,7 +224,7 @@ def _witness(trained: TrainedModel, quantities: Sequence[Quantity], rng: random.
             float(rng.randrange(len(quantity.levels))) if quantity.levels else rng.uniform(*_limits(quantity))
             for quantity in quantities
         )
-        exact = Fraction(trained.intercept)
+        exact = Fraction(trained.intercept) + prevalence_shift(trained)
         for term, weight in zip(trained.terms, trained.weights, strict=True):
             value = Fraction(row[term.of[0]]) if term.level is None else Fraction(row[term.of[0]] == term.level)
             exact += Fraction(weight) * (value - Fraction(term.centre)) / Fraction(term.scale)

@@ -19,12 +19,12 @@ from typing import Any
 
 import jsonschema
 import pytest
-from models import sample_sealed_models
+from models import sample_extended_models, sample_sealed_models
 
 from runtime_min.canonical import canonical
 from runtime_min.codec import load, load_trained, model_id, sealed_text, trained_text
 from runtime_min.errors import FileError
-from runtime_min.model import SealedModel, TrainedModel
+from runtime_min.model import Choice, SealedModel, Strength, TrainedModel
 
 FACTS = Path(__file__).parent / "check_values" / "facts"
 JSON_FACTS = json.loads((FACTS / "json.json").read_text(encoding="utf-8"))
@@ -32,10 +32,16 @@ SCHEMAS = {
     kind: json.loads((Path(__file__).parent.parent / "runtime_min" / f"{kind}.schema.json").read_text(encoding="utf-8"))
     for kind in ("sealed", "trained")
 }
+CHOICE = Choice("cross-validation", 5, 0.5, (Strength(0.5, 0.31, 0.02), Strength(1.0, 0.32, 0.02)))
 SAMPLES = sample_sealed_models()
 TRAINED, SEALED = SAMPLES["pump_binary32"]
+for _name, (_trained, _sealed) in sample_extended_models().items():
+    SAMPLES[_name] = dataclasses.replace(_trained, choice=CHOICE), _sealed
+EXTENDED_TRAINED, EXTENDED = SAMPLES["mixed_binary32"]
 SEALED_DATA = json.loads(sealed_text(SEALED))
 TRAINED_DATA = json.loads(trained_text(TRAINED))
+EXTENDED_DATA = json.loads(sealed_text(EXTENDED))
+EXTENDED_TRAINED_DATA = json.loads(trained_text(EXTENDED_TRAINED))
 
 
 # --- round trips -----------------------------------------------------------------------------------------------------
@@ -68,7 +74,8 @@ def test_model_id_changes_with_every_field_but_about() -> None:
     assert model_id(other) == model_id(SEALED)
     for field in dataclasses.fields(SEALED):
         if field.name != "about":
-            assert model_id(dataclasses.replace(SEALED, **{field.name: None})) != model_id(SEALED)
+            other = "another" if getattr(SEALED, field.name) is None else None
+            assert model_id(dataclasses.replace(SEALED, **{field.name: other})) != model_id(SEALED)
 
 
 # --- schemas ---------------------------------------------------------------------------------------------------------
@@ -226,9 +233,9 @@ SEALED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
     ),
     "another arithmetic": (
         ("model", "arithmetic"),
-        "int16",
+        "binary16",
         True,
-        'model.arithmetic: found "int16"; this version knows binary64, binary32',
+        'model.arithmetic: found "binary16"; this version knows binary64, binary32',
     ),
     "a number that is no binary32": (
         ("model", "intercepts", 0),
@@ -364,6 +371,164 @@ TRAINED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
 }
 
 
+EXACT = 'a number as a text like "-95", "0.1" or "1/10"'
+
+# Of the model "mixed": input 0 has an origin, input 1 counts, input 3 levels; a prevalence, a choice and a no-call.
+EXTENDED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
+    "another origin in the model": (
+        ("model", "inputs", 0, "origin"),
+        "101326",
+        False,
+        f"about.request.inputs: are not the inputs of the model; {SEAL_AGAIN}",
+    ),
+    "origin of no number": (
+        ("model", "inputs", 0, "origin"),
+        "1e1000000",
+        True,
+        f'model.inputs[0].origin: found "1e1000000"; expected {EXACT}',
+    ),
+    "origin asked for as a number": (
+        ("about", "request", "inputs", 0, "origin"),
+        101325,
+        True,
+        f"model.about.request.inputs[0].origin: found 101325, expected a text; {AGAIN}",
+    ),
+    "origin beside counts": (
+        ("about", "request", "inputs", 1, "origin"),
+        "1",
+        True,
+        "about.request.inputs[1].counts: found beside an origin; keep one of the two: the offset of counts is an",
+    ),
+    "origin of levels": (
+        ("about", "request", "inputs", 3, "origin"),
+        "1",
+        True,
+        "about.request.inputs[3].origin: found beside levels; leave it out",
+    ),
+    "gain of zero": (
+        ("model", "inputs", 1, "counts", "gain"),
+        "0e5",
+        True,
+        f'model.inputs[1].counts.gain: found "0e5"; expected {EXACT}, other than 0',
+    ),
+    "offset of no number": (
+        ("about", "request", "inputs", 1, "counts", "offset"),
+        "nan",
+        True,
+        f'about.request.inputs[1].counts.offset: found "nan"; expected {EXACT}',
+    ),
+    "too many bits": (
+        ("model", "inputs", 1, "counts", "bits"),
+        33,
+        True,
+        "model.inputs[1].counts.bits: found 33; expected 1 to 32",
+    ),
+    "a sign for a number": (
+        ("model", "inputs", 1, "counts", "signed"),
+        1,
+        True,
+        f"model.inputs[1].counts.signed: found 1, expected true or false; {AGAIN}",
+    ),
+    "counts that sealing chose": (
+        ("model", "inputs", 1, "counts", "chosen"),
+        True,
+        False,
+        "model.inputs[1].counts: found counts that sealing chose; only integers have them",
+    ),
+    "counts asked for as chosen": (
+        ("about", "request", "inputs", 1, "counts", "chosen"),
+        True,
+        False,
+        "about.request.inputs[1].counts.chosen: found true; only sealing chooses counts",
+    ),
+    "limit beyond the bits": (
+        ("model", "inputs", 1, "high"),
+        4096,
+        False,
+        "model.inputs[1].high: found 4096.0; expected a count from 0 to 4095",
+    ),
+    "limit between two counts": (
+        ("model", "inputs", 1, "low"),
+        0.5,
+        False,
+        "model.inputs[1].low: found 0.5; expected a count from 0 to 4095",
+    ),
+    "shift in floating point": (
+        ("model", "terms", 0, "shift"),
+        2,
+        False,
+        "model.terms[0].shift: found 2; binary32 has none",
+    ),
+    "accumulator in floating point": (
+        ("model", "accumulator_shift"),
+        20,
+        True,
+        "model.accumulator_shift: found 20; binary32 has none",
+    ),
+    "table in floating point": (
+        ("model", "table"),
+        {"drop": 0, "step": 4, "nodes": [16384, 20000]},
+        True,
+        "model.table: found a table; binary32 has none",
+    ),
+    "no exponential": (("model", "exponential"), None, True, "model.exponential: found null; binary32 needs its"),
+    "no-call below zero": (
+        ("about", "request", "decision", "no_call"),
+        "-0.75",
+        True,
+        f'about.request.decision.no_call: found "-0.75"; expected {EXACT}, 0 or more',
+    ),
+    "real rows of a text": (
+        ("about", "request", "real_rows"),
+        "false",
+        True,
+        f'model.about.request.real_rows: found "false", expected true or false; {AGAIN}',
+    ),
+}
+
+EXTENDED_TRAINED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
+    "prevalence of one": (
+        ("trained", "prevalence"),
+        "1.0",
+        False,
+        'trained.prevalence: found "1.0"; expected a share between 0 and 1',
+    ),
+    "prevalence of zero": (
+        ("trained", "prevalence"),
+        "0.0",
+        True,
+        'trained.prevalence: found "0.0"; expected a share between 0 and 1',
+    ),
+    "prevalence as a number": (
+        ("trained", "prevalence"),
+        0.02,
+        True,
+        f"trained.prevalence: found 0.02, expected a text; {AGAIN}",
+    ),
+    "strengths out of order": (
+        ("trained", "choice", "strengths", 0, "sd"),
+        2,
+        False,
+        f"trained.choice.strengths: found sds that do not grow from above 0; {SEAL_AGAIN}",
+    ),
+    "chosen sd of zero": (("trained", "choice", "sd"), 0, True, "trained.choice.sd: found 0.0; a prior sd is positive"),
+    "negative folds": (("trained", "choice", "folds"), -1, True, "trained.choice.folds: found -1; expected 0 or more"),
+    "negative error": (
+        ("trained", "choice", "strengths", 1, "standard_error"),
+        -0.5,
+        True,
+        "trained.choice.strengths[1].standard_error: found -0.5; expected 0 or more",
+    ),
+}
+
+DAMAGES = {
+    "sealed": (SEALED_DATA, SEALED_DAMAGE),
+    "trained": (TRAINED_DATA, TRAINED_DAMAGE),
+    "extended sealed": (EXTENDED_DATA, EXTENDED_DAMAGE),
+    "extended trained": (EXTENDED_TRAINED_DATA, EXTENDED_TRAINED_DAMAGE),
+}
+
+
 def damaged(data: Any, place: Path_, value: Any) -> Any:
     result = copy.deepcopy(data)
     inner = result
@@ -376,12 +541,12 @@ def damaged(data: Any, place: Path_, value: Any) -> Any:
     return result
 
 
-@pytest.mark.parametrize(
-    ("kind", "name"), [("sealed", name) for name in SEALED_DAMAGE] + [("trained", name) for name in TRAINED_DAMAGE]
-)
-def test_damaged_model_is_refused_with_its_place(kind: str, name: str, tmp_path: Path) -> None:
-    place, value, seen, sentence = (SEALED_DAMAGE if kind == "sealed" else TRAINED_DAMAGE)[name]
-    data = damaged(SEALED_DATA if kind == "sealed" else TRAINED_DATA, place, value)
+@pytest.mark.parametrize(("group", "name"), [(group, name) for group, (_, table) in DAMAGES.items() for name in table])
+def test_damaged_model_is_refused_with_its_place(group: str, name: str, tmp_path: Path) -> None:
+    whole, table = DAMAGES[group]
+    place, value, seen, sentence = table[name]
+    kind = group.removeprefix("extended ")
+    data = damaged(whole, place, value)
     found = problems_of(tmp_path, kind, json.dumps(data))
     sentence = sentence.replace("{0}", TRAINED.terms[0].name)
     assert any(entry.startswith(sentence) for entry in found), found
@@ -427,10 +592,13 @@ def _is_number(value: Any) -> bool:
     return isinstance(value, (int, float)) and not isinstance(value, bool)
 
 
+@pytest.mark.parametrize("name", ["lenient_binary32", "mixed_binary32"])
 @pytest.mark.parametrize("kind", SCHEMAS)
-def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(kind: str, tmp_path: Path) -> None:
+def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(
+    kind: str, name: str, tmp_path: Path
+) -> None:
     """Every place of a small file, put out of order in ten ways."""
-    trained, sealed = SAMPLES["lenient_binary32"]
+    trained, sealed = SAMPLES[name]
     small = dataclasses.replace(trained, witness=trained.witness[:1], held_out=TRAINED.held_out)
     data = json.loads(sealed_text(sealed) if kind == "sealed" else trained_text(small))
     validator = jsonschema.Draft202012Validator(SCHEMAS[kind])

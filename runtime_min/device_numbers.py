@@ -1,0 +1,33 @@
+"""Every number that a device carries, in one order: that of the tables' CRC-32."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from runtime_min.model import SealedModel
+
+
+def device_numbers(sealed: SealedModel) -> Iterator[tuple[str, float]]:
+    """(place in the file, number): lows, highs, typical values, intercepts, data, weights, thresholds, exponential."""
+    for key in ("low", "high", "typical"):
+        for position, entry in enumerate(sealed.inputs):
+            value = getattr(entry, key)
+            if value is not None:
+                yield f"model.inputs[{position}].{key}", value
+    for k, intercept in enumerate(sealed.intercepts):
+        yield f"model.intercepts[{k}]", intercept
+    for position, term in enumerate(sealed.terms):
+        if term.datum is not None:
+            yield f"model.terms[{position}].datum", term.datum
+    for k in range(len(sealed.intercepts)):
+        for position, term in enumerate(sealed.terms):
+            for column, weight in enumerate(term.weights[k] if k < len(term.weights) else ()):
+                yield f"model.terms[{position}].weights[{k}][{column}]", weight
+    yield "model.decision.low", sealed.decision.low
+    yield "model.decision.high", sealed.decision.high
+    exponential = sealed.exponential
+    if exponential is not None:
+        for key in ("inv_ln2", "ln2_high", "ln2_low", "floor"):
+            yield f"model.exponential.{key}", getattr(exponential, key)
+        for position, value in enumerate(exponential.coefficients):
+            yield f"model.exponential.coefficients[{position}]", value
