@@ -57,16 +57,6 @@ def run_program(
     return Ended(process.returncode, out, err, None)
 
 
-def death(status: int) -> str:
-    """An exit status in words: of a signal its name."""
-    if status >= 0:
-        return f"ended with status {status}"
-    try:
-        return f"was killed by {signal.Signals(-status).name}"
-    except ValueError:
-        return f"was killed by signal {-status}"
-
-
 def _kill(process: subprocess.Popen[bytes]) -> None:
     with suppress(ProcessLookupError):
         os.killpg(process.pid, signal.SIGKILL)

@@ -6,8 +6,8 @@ not (a warning, a crash, a hang, odd output) becomes the trouble of that run; no
 
 from __future__ import annotations
 
+import os
 import re
-import subprocess
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from tempfile import TemporaryDirectory
@@ -16,12 +16,14 @@ from export.targets import Output, Run
 from export.targets.c import ways
 from export.targets.c.template import fill
 from export.targets.c.ways import Way
+from export.targets.programs import run_program
 from runtime_min.arithmetic import ROUND, from_bits, raw_bits
 from runtime_min.model import SealedModel
 
 INSTALL = "install a C compiler (Debian: apt-get install gcc g++; or pip install 'firmlogit[compiler]')"
 RUN_SECONDS = 30
 SHOWN_LINES = 3
+PLAIN_WORDS = {"LC_ALL": "C"}  # a compiler speaks English in ASCII
 
 _HEAD = re.compile(r"([0-9a-zA-Z]{0,64}) (-?\d{1,9})")
 _ROW = {
@@ -47,34 +49,25 @@ def run_one(way: Way, artefact: Path, sealed: SealedModel, text: str, row_count:
     def broken(trouble: str) -> Run:
         return Run(way.what, True, trouble, None, None, ())
 
-    with TemporaryDirectory(prefix="firmlogit-") as folder:
-        sources = _write_sources(Path(folder), artefact, sealed, way.separate)
-        program = Path(folder) / "program"
-        command = [*way.command, *map(str, sources), "-o", str(program)]
-        try:
-            done = subprocess.run(
-                command, capture_output=True, text=True, timeout=way.compiler.seconds, check=False, cwd=folder
-            )
-        except (OSError, subprocess.TimeoutExpired) as error:
-            return broken(f"the compiler did not finish ({_reason(error)})")
-        if done.returncode != 0:
-            return broken("it does not compile: " + _shown(done.stderr, folder))
-        try:
-            done = subprocess.run(
-                [str(program)],
-                input=text,
-                capture_output=True,
-                text=True,
-                errors="replace",
-                timeout=RUN_SECONDS,
-                check=False,
-                cwd=folder,
-            )
-        except (OSError, subprocess.TimeoutExpired) as error:
-            return broken(f"the program did not finish ({_reason(error)})")
-        if done.returncode != 0:
-            return broken(f"the program ended with status {done.returncode}: " + _shown(done.stderr, folder))
-    return _parsed(way.what, done.stdout, sealed.arithmetic, row_count)
+    try:
+        with TemporaryDirectory(prefix="firmlogit-") as folder:
+            sources = _write_sources(Path(folder), artefact, sealed, way.separate)
+            program = Path(folder) / "program"
+            command = [*way.command, *map(str, sources), "-o", str(program)]
+            done = run_program(command, way.compiler.seconds, folder=folder, environment={**os.environ, **PLAIN_WORDS})
+            if done.trouble:
+                return broken(f"the compiler did not finish ({done.trouble})")
+            if done.status != 0:
+                return broken("it does not compile: " + _shown(done.err, folder))
+            done = run_program([str(program)], RUN_SECONDS, text.encode(), folder)
+            if done.trouble:
+                return broken(f"the program did not finish ({done.trouble})")
+            if done.status != 0:
+                return broken(f"the program ended with status {done.status}: " + _shown(done.err, folder))
+    except OSError as error:
+        trouble = f"no temporary folder to compile in ({error.strerror or error}); free space or set TMPDIR"
+        return Run(way.what, False, trouble, None, None, ())
+    return _parsed(way.what, done.out.decode("utf-8", "replace"), sealed.arithmetic, row_count)
 
 
 def rows_as_bits(rows: Sequence[Sequence[float]], arithmetic: str) -> str:
@@ -122,14 +115,9 @@ def _bits(text: str, arithmetic: str) -> int:
     return bits
 
 
-def _reason(error: Exception) -> str:
-    if isinstance(error, subprocess.TimeoutExpired):
-        return f"stopped after {error.timeout:g} s"
-    return str(getattr(error, "strerror", None) or error)
-
-
-def _shown(text: str, folder: str) -> str:
+def _shown(words: bytes, folder: str) -> str:
     """The first lines of a message, without the folder, which is another one each time."""
-    lines = [line.replace(folder + "/", "").strip() for line in text.splitlines()]
+    text = words.decode("utf-8", "replace").replace(folder + "/", "")
+    lines = [line.strip() for line in text.splitlines()]
     wanted = [line for line in lines if "error" in line or "warning" in line] or lines
     return " | ".join(wanted[:SHOWN_LINES]) or "no message"

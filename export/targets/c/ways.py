@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import platform
 import shutil
-import subprocess
 import sys
 from dataclasses import dataclass
 from importlib.util import find_spec
 from pathlib import Path
+
+from export.targets.programs import run_program
 
 STRICT = ("-Wall", "-Wextra", "-Wpedantic", "-Wconversion", "-Wshadow", "-Wdouble-promotion", "-Werror")
 SECONDS = 30
@@ -125,9 +126,6 @@ def _zig() -> Compiler | None:
 
 
 def _first_line(command: tuple[str, ...]) -> str | None:
-    try:
-        done = subprocess.run(command, capture_output=True, text=True, timeout=SECONDS, check=False)
-    except (OSError, subprocess.TimeoutExpired):
-        return None
-    lines = done.stdout.splitlines()
-    return lines[0] if done.returncode == 0 and lines else None
+    done = run_program(command, SECONDS)
+    lines = done.out.decode("utf-8", "replace").splitlines()
+    return lines[0] if done.status == 0 and lines else None

@@ -10,7 +10,6 @@ from __future__ import annotations
 
 import importlib.util
 import json
-import subprocess
 import sys
 from collections.abc import Iterator, Sequence
 from dataclasses import asdict, dataclass
@@ -24,6 +23,7 @@ from onnx import ModelProto
 from export.targets import SELF_TEST_TABLES, Output, Run
 from export.targets.onnx.emit import model
 from export.targets.onnx.session import short
+from export.targets.programs import run_program
 from runtime_min.arithmetic import raw_bits
 from runtime_min.model import SealedModel
 
@@ -81,15 +81,13 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
         "ways": [asdict(way) for way in ways],
     }
     command = [sys.executable, "-I", "-B", str(Path(__file__).with_name("session.py"))]
-    try:
-        done = subprocess.run(command, input=json.dumps(asked).encode(), capture_output=True, timeout=TIME_LIMIT)
-        printed = done.stdout
-        last = done.stderr.decode(errors="replace").strip().splitlines()[-1:]
-        trouble = short(last[0]) if last else f"ended with status {done.returncode}"
-    except subprocess.TimeoutExpired as late:
-        printed = late.stdout or b""
-        trouble = f"did not end within {TIME_LIMIT:g} s"
-    lines = printed.split(b"\n")[:-1]  # what follows the last line end was cut off
+    done = run_program(command, TIME_LIMIT, json.dumps(asked).encode())
+    last = done.err.decode(errors="replace").strip().splitlines()[-1:]
+    if done.trouble:
+        trouble = f"did not finish ({done.trouble})"
+    else:
+        trouble = short(last[0]) if last else f"ended with status {done.status}"
+    lines = done.out.split(b"\n")[:-1]  # what follows the last line end was cut off
     for position, way in enumerate(ways):
         what = f"ONNX Runtime, {way.what}"
         if position >= len(lines):

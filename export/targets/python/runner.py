@@ -5,12 +5,12 @@ Rows go in and outputs come back as the bits of binary64, so that nothing is rou
 
 from __future__ import annotations
 
-import subprocess
 import sys
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from export.targets import Output, Run
+from export.targets.programs import run_program
 from runtime_min.arithmetic import ROUND, from_bits, raw_bits
 from runtime_min.model import SealedModel
 
@@ -50,19 +50,17 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
     for what, options, numbers in THOROUGH if thorough else QUICK:
         command = [sys.executable, "-I", "-S", "-B", *options, "-c", SCRIPT, str(artefact), sealed.name, numbers]
         what = f"{what}, {sys.version_info.major}.{sys.version_info.minor}"
-        try:
-            done = subprocess.run(
-                command, input=asked, capture_output=True, encoding="utf-8", errors="replace", timeout=TIME_LIMIT
-            )
-        except subprocess.TimeoutExpired:
-            yield Run(what, True, f"did not end within {TIME_LIMIT:g} s", None, None, ())
+        done = run_program(command, TIME_LIMIT, asked.encode())
+        if done.trouble:
+            yield Run(what, True, f"did not finish ({done.trouble})", None, None, ())
             continue
-        if done.returncode != 0:
-            last = (done.stderr.strip().splitlines() or [f"ended with status {done.returncode}"])[-1]
+        if done.status != 0:
+            words = done.err.decode("utf-8", "replace").strip().splitlines()
+            last = (words or [f"ended with status {done.status}"])[-1]
             yield Run(what, True, _printable(last), None, None, ())
             continue
         try:
-            yield _read(what, sealed, done.stdout, len(rows))
+            yield _read(what, sealed, done.out.decode("utf-8", "replace"), len(rows))
         except ValueError as error:
             yield Run(what, True, f"printed what is no output: {_printable(str(error))}", None, None, ())
 
