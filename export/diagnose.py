@@ -102,7 +102,7 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
             return "the artefact's log-odds are not finite"
         rows.append(_columns(sealed, values))
         deltas.append(delta)
-        ulps.append(abs(delta) / float(np.spacing(_typed(sealed, abs(want)))))
+        ulps.append(abs(delta) / float(np.spacing(_typed(sealed, _largest_partial_sum(sealed, rows[-1])))))
     names = _column_names(sealed)
     table, target = np.array(rows), np.array(deltas)
     sizes = np.maximum(np.abs(table).max(axis=0), 1e-300)
@@ -116,7 +116,7 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
         return "the differences follow " + " and ".join(named)
     if max(ulps) <= ROUNDING_ULPS * len(sealed.terms):
         return (
-            f"differences of at most {max(ulps):.0f} in the last place of the log-odds: a last digit of a number is "
+            f"differences of at most {max(ulps):.0f} in the last place of the largest sum: a last digit of a number is "
             "off, or operations are fused or not rounded one by one (look at the literals and the compiler's options)"
         )
     return "no single number explains the differences: look at the order of the terms and at how inputs are prepared"
@@ -135,6 +135,15 @@ def _columns(sealed: SealedModel, values: Sequence[float]) -> list[float]:
         else:
             columns.append(value - (term.datum or 0.0))
     return columns
+
+
+def _largest_partial_sum(sealed: SealedModel, columns: Sequence[float]) -> float:
+    """The sums on the way to the log-odds may be larger than it, and so are their roundings."""
+    weights = [sealed.intercepts[0]]
+    for term in sealed.terms:
+        weights += term.weights[0][1:] if term.form == "level" else term.weights[0]
+    partial = np.add.accumulate(np.array(weights) * np.array(columns))
+    return float(np.abs(partial).max())
 
 
 def _column_names(sealed: SealedModel) -> list[str]:
