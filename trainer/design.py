@@ -15,10 +15,12 @@ import numpy as np
 import numpy.typing as npt
 
 from runtime_min.model import TrainedInput
+from trainer.standardise import class_sums
 
 Floats = npt.NDArray[np.float64]
 
 _SUMMABLE = 2.0**900  # of numbers up to this no sum overflows, in any order
+_SMALLEST = 2.0**-100  # a row weight from which a product that underflows is nothing beside the mean
 
 
 @dataclass(frozen=True)
@@ -53,20 +55,30 @@ def design_matrix(columns: Sequence[Column], values: Floats) -> Floats:
     return matrix
 
 
-def typical_value(values: Floats, level_count: int) -> float | None:
+def typical_value(values: Floats, level_count: int, row_weights: Floats | None = None) -> float | None:
     """What stands in for a missing value of one input, from its fitted rows (n,), NaN where missing; None without any.
 
-    A number: the mean, from a sum that is rounded once, so that the order of the rows changes no bit. Levels: the index
-    of the commonest, of several as common the lowest.
+    row_weights (n,) > 0, or None. A number: the weighted mean, from sums that are rounded once, so that the order of
+    the rows changes no bit. Levels: the index of the one with the most weight, of several with as much the lowest.
     """
-    present = values[~np.isnan(values)]
-    if not len(present):
+    present = ~np.isnan(values)
+    values = values[present]
+    if not len(values):
         return None
+    weights = None if row_weights is None else row_weights[present]
     if level_count:
-        return float(np.bincount(present.astype(np.int64), minlength=level_count).argmax())
-    if float(np.abs(present).max()) > _SUMMABLE:
-        return float(sum(map(Fraction, present.tolist())) / len(present))
-    return math.fsum(present) / len(present)
+        return float(np.argmax(class_sums(values.astype(np.int64), weights, level_count)))
+    return _mean(values, weights)
+
+
+def _mean(values: Floats, weights: Floats | None) -> float:
+    total = float(len(values)) if weights is None else math.fsum(weights)
+    with np.errstate(over="ignore"):
+        products = values if weights is None else values * weights
+        if float(np.abs(products).max()) <= _SUMMABLE and (weights is None or weights.min() >= _SMALLEST):
+            return math.fsum(products) / total
+    exact = [Fraction(1)] * len(values) if weights is None else list(map(Fraction, weights.tolist()))
+    return float(sum(w * Fraction(v) for w, v in zip(exact, values.tolist(), strict=True)) / sum(exact))
 
 
 def with_typical(values: Floats, typical: Sequence[float | None]) -> Floats:

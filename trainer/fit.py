@@ -1,10 +1,10 @@
-"""From rows that were read, or from arrays, to a trained model: design, judge, standardise, solve, witness, results."""
+"""From rows that were read, or from arrays, to a trained model: design, judge, prior, solve, witness, results."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from fractions import Fraction
 
 import numpy as np
@@ -22,57 +22,67 @@ from runtime_min.model import (
 )
 from runtime_min.sealing import round_to
 from trainer.arrays import LARGEST, read_arrays
-from trainer.design import columns_of, design_matrix, typical_value, with_typical
+from trainer.design import Column, columns_of, design_matrix, typical_value, with_typical
 from trainer.judge import judge
-from trainer.objective import Prior
 from trainer.operate import held_out_results
 from trainer.plan import InputPlan, Plan
+from trainer.prior import FOLDS, ColumnPrior, PriorRule, choose_sd, rule_of
 from trainer.solve import solve
-from trainer.split import held_out_rows
-from trainer.standardise import class_sums, standardise
+from trainer.split import folds, held_out_rows
+from trainer.standardise import Standardised, class_sums, standardise
 from trainer.table import Rows
-from trainer.witness import log_odds_with_bounds, witness_of
+from trainer.witness import log_odds_with_bounds, real_rows, shift_to_field, witness_of
 
 Floats = npt.NDArray[np.float64]
 Labels = npt.NDArray[np.int64]
 
 
+@dataclass(frozen=True)
+class _Data:
+    """What is fitted: values (n, inputs) without a missing one, labels (n,), row_weights (n,) > 0 or None.
+
+    limits: (low, high) of each input, for the witness. real (m, inputs): rows that it may show, or None.
+    """
+
+    inputs: tuple[TrainedInput, ...]
+    classes: tuple[str, ...]
+    values: Floats
+    labels: Labels
+    row_weights: Floats | None
+    limits: Sequence[tuple[float, float]]
+    counts: FittedRows
+    prevalence: Fraction | None = None
+    real: Floats | None = None
+
+    @property
+    def columns(self) -> tuple[Column, ...]:
+        return columns_of(self.inputs)
+
+
 def fit_plan(plan: Plan, rows: Rows) -> TrainedModel:
     """Fit what the plan asks for on the rows that it does not hold out.
 
-    Centres, scales, typical values and weights come from the fitted rows alone; the results are of the held-out rows
-    alone. Raises RowsError where the rows cannot be split, FitError with all that keeps them from determining a model.
+    Centres, scales, typical values, the prior's strength and weights come from the fitted rows alone; the results are
+    of the held-out rows alone. Raises RowsError where the rows cannot be split, FitError with all that keeps them from
+    determining a model.
     """
-    if plan.prior.method != "fixed" or plan.prior.terms or plan.decision.prevalence is not None:
-        found = "asks for more than a number under sd, which is not there yet"
-        raise FitError(Problem("[prior]", found, "write sd = 1.0, or another number, or inf"))
     out = held_out_rows(rows, plan.rows.held_out, plan.rows.seed)
-    fitted = rows.values[~out]
-    inputs = tuple(
-        TrainedInput(entry.name, entry.unit, entry.levels, typical_value(column, len(entry.levels)))
-        for entry, column in zip(rows.inputs, fitted.T, strict=True)
-    )
-    typical = [entry.typical for entry in inputs]
-    if empty := [entry.name for entry in inputs if entry.typical is None]:
-        found, todo = f"found no value in any of the {len(fitted)} fitted rows", "remove the input"
-        raise FitError(Problem(f'[[input]] "{name}"', found, todo) for name in empty)
-    columns = columns_of(inputs)
-    sd = _float_sd(plan.prior.sd)
-    trained = _fit(
-        inputs,
-        rows.classes,
-        with_typical(fitted, typical),
-        rows.labels[~out],
-        None if rows.weights is None else rows.weights[~out],
-        Prior((0.0,) * len(columns), (sd,) * len(columns), _float_sd(plan.prior.intercept_sd)),
-        [_limits(entry) for entry in rows.inputs],
-        FittedRows(rows.total, rows.dropped, len(fitted), int(out.sum()), rows.sha256),
-    )
+    data = _to_fit(plan, rows, out)
+    rule = rule_of(plan.prior, data.columns)
+    standardised = _standardised(data, rule, Fraction(1) if plan.prior.method != "fixed" else plan.prior.sd)
+    sd, choice = plan.prior.sd, None
+    if plan.prior.method == "cross-validation" and rule.is_shared:
+        fold = folds(rows, ~out, FOLDS, plan.rows.seed)
+        choice = choose_sd(data.inputs, rows.values[~out], data.labels, data.row_weights, fold, rule)
+        sd = Fraction(str(choice.sd))
+    trained = replace(_fit(data, standardised, rule, sd), choice=choice)
     if not out.any():
         return trained
-    log_odds, _ = log_odds_with_bounds(trained.terms, trained.scores[0], with_typical(rows.values[out], typical))
+    values = with_typical(rows.values[out], [entry.typical for entry in trained.inputs])
+    log_odds, _ = log_odds_with_bounds(trained.terms, trained.scores[0], values)
     base_rate = trained.class_weights[1] / math.fsum(trained.class_weights)
-    return replace(trained, held_out=held_out_results(log_odds, rows.labels[out], base_rate))
+    weights = None if rows.weights is None else rows.weights[out]
+    return replace(trained, held_out=held_out_results(log_odds, rows.labels[out], base_rate, weights))
 
 
 def fit_map(
@@ -98,70 +108,92 @@ def fit_map(
     of the other arguments alone, or with all that keeps the rows from determining a model.
     """
     read = read_arrays(X, y, sd, names, row_weights, intercept_sd)
-    trained = _fit(
+    data = _Data(
         tuple(TrainedInput(name, "", (), None) for name in read.names),
         read.classes,
         read.values,
         read.labels,
         read.row_weights,
-        Prior((0.0,) * len(read.names), read.sds, read.intercept_sd),
         read.limits,
         FittedRows(read.total, 0, len(read.values), 0, None),
     )
+    own = tuple(ColumnPrior(sd=_exact_sd(own_sd), shared=False) for own_sd in read.sds)
+    rule = PriorRule(own, _exact_sd(read.intercept_sd))
+    trained = _fit(data, _standardised(data, rule, None), rule, None)
     means = tuple(TrainedInput(term.name, "", (), term.centre) for term in trained.terms)
     return replace(trained, inputs=means)
 
 
-def _fit(
-    inputs: tuple[TrainedInput, ...],
-    classes: tuple[str, ...],
-    values: Floats,
-    labels: Labels,
-    row_weights: Floats | None,
-    prior: Prior,
-    limits: Sequence[tuple[float, float]],
-    counts: FittedRows,
-) -> TrainedModel:
+def _to_fit(plan: Plan, rows: Rows, out: npt.NDArray[np.bool_]) -> _Data:
+    fitted, weights = rows.values[~out], None if rows.weights is None else rows.weights[~out]
+    inputs = tuple(
+        TrainedInput(entry.name, entry.unit, entry.levels, typical_value(column, len(entry.levels), weights))
+        for entry, column in zip(rows.inputs, fitted.T, strict=True)
+    )
+    if empty := [entry.name for entry in inputs if entry.typical is None]:
+        found, todo = f"found no value in any of the {len(fitted)} fitted rows", "remove the input"
+        raise FitError(Problem(f'[[input]] "{name}"', found, todo) for name in empty)
+    typical = [entry.typical for entry in inputs]
+    shown = real_rows(rows.keys, np.flatnonzero(~out)) if plan.real_rows else None
+    return _Data(
+        inputs,
+        rows.classes,
+        with_typical(fitted, typical),
+        rows.labels[~out],
+        weights,
+        [_limits(entry) for entry in rows.inputs],
+        FittedRows(rows.total, rows.dropped, len(fitted), int(out.sum()), rows.sha256),
+        plan.decision.prevalence,
+        None if shown is None else with_typical(rows.values[shown], typical),
+    )
+
+
+def _standardised(data: _Data, rule: PriorRule, sd: Fraction | None) -> Standardised:
+    """Raises FitError with every reason why the rows do not determine a model; sd: shared, any finite one is alike."""
     problems = [
         Problem(f'input "{entry.name}"', f"found numbers as large as {max(map(abs, ends)):g}", "take a larger unit")
-        for entry, ends in zip(inputs, limits, strict=True)
+        for entry, ends in zip(data.inputs, data.limits, strict=True)
         if max(map(abs, ends)) > LARGEST
     ]
     if problems:
         raise FitError(problems)
-    columns = columns_of(inputs)
-    matrix = design_matrix(columns, values)
-    judged = prior
-    if math.inf not in prior.sds and math.isinf(prior.intercept_sd):
-        # With a finite sd of every weight, two classes that have rows determine a flat intercept: judge need not try.
-        judged = replace(prior, intercept_sd=1.0)
-    reasons = judge(matrix, labels, row_weights, judged, [column.name for column in columns], classes)
-    if reasons:
+    matrix = design_matrix(data.columns, data.values)
+    standardised = standardise(matrix, data.row_weights, [column.form == "value" for column in data.columns])
+    names = [column.name for column in data.columns]
+    prior = rule.on(standardised.scales, sd)
+    if reasons := judge(matrix, data.labels, data.row_weights, prior, names, data.classes):
         raise FitError(reasons)
-    standardised = standardise(matrix, row_weights, [column.form == "value" for column in columns])
-    solution = solve(standardised.columns, labels, row_weights, prior)
+    return standardised
+
+
+def _fit(data: _Data, standardised: Standardised, rule: PriorRule, sd: Fraction | None) -> TrainedModel:
+    prior = rule.on(standardised.scales, sd)
+    solution = solve(standardised.columns, data.labels, data.row_weights, prior)
     terms = tuple(
         TrainedTerm(column.name, column.form, column.of, column.level, centre, scale)
-        for column, centre, scale in zip(columns, standardised.centres, standardised.scales, strict=True)
+        for column, centre, scale in zip(data.columns, standardised.centres, standardised.scales, strict=True)
     )
     scores = (Score(solution.intercept, solution.weights),)
+    class_weights = class_sums(data.labels, data.row_weights, len(data.classes))
+    shift = shift_to_field(data.prevalence, class_weights)
     return TrainedModel(
-        inputs=inputs,
-        classes=classes,
-        class_weights=class_sums(labels, row_weights, len(classes)),
+        inputs=data.inputs,
+        classes=data.classes,
+        class_weights=class_weights,
         terms=terms,
         scores=scores,
         prior=TrainedPrior(prior.means, tuple(_stored_sd(sd) for sd in prior.sds), _stored_sd(prior.intercept_sd)),
         covariance=solution.covariance,
         certificate=Certificate(solution.gradient, solution.newton_decrement, solution.distance),
-        rows=counts,
+        rows=data.counts,
         held_out=None,
-        witness=witness_of(inputs, terms, scores, limits),
+        witness=witness_of(data.inputs, terms, scores, data.limits, shift, data.real),
+        prevalence=None if data.prevalence is None else str(data.prevalence),
     )
 
 
-def _float_sd(sd: Fraction | None) -> float:
-    return math.inf if sd is None else float(sd)
+def _exact_sd(sd: float) -> Fraction | None:
+    return None if math.isinf(sd) else Fraction(sd)
 
 
 def _stored_sd(sd: float) -> float | None:

@@ -17,6 +17,8 @@ in pairs of doubles until one more step cannot change the side.
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -26,7 +28,7 @@ from scipy.linalg import lapack
 from threadpoolctl import ThreadpoolController
 
 from runtime_min.errors import FitError, Problem
-from trainer.approach import approach, sample, sample_size
+from trainer.approach import Solve, approach, sample, sample_size
 from trainer.grid import WEIGHT_STEP
 from trainer.objective import (
     BLOCK_ROWS,
@@ -111,7 +113,7 @@ def solve(
     weights.
     """
     objective = objective_of(columns, labels, row_weights, prior)
-    with _threads.limit(limits=1, user_api="blas"), np.errstate(all="ignore"):
+    with one_thread():
         theta, z, settled = _better_start(objective, start), None, _SETTLED
         if size := sample_size(objective):
             near = _newton(sample(objective, size), theta, None, _SAMPLE_SETTLED, block_rows)
@@ -130,6 +132,23 @@ def solve(
         covariance = found[1].inverse()
         theta, checked = _to_grid(objective, found[0], covariance, block_rows)
     return _certified(theta, checked, covariance)
+
+
+def near_optimum(objective: Objective, start: Array, settled: float) -> tuple[Array, Solve] | None:
+    """(θ, g -> H⁻¹ g) after Newton steps from `start` until one changes no log-odds by more than `settled`.
+
+    Not on the grid and not certified: for many fits of which only one will count. None where there is no optimum to
+    find. To be called within `one_thread`.
+    """
+    found = _newton(objective, start, None, settled, BLOCK_ROWS)
+    return None if found is None else (found[0], found[1].solve)
+
+
+@contextmanager
+def one_thread() -> Iterator[None]:
+    """BLAS on one thread, which small products need, and no warnings of numbers that overflow on the way."""
+    with _threads.limit(limits=1, user_api="blas"), np.errstate(all="ignore"):
+        yield
 
 
 def _better_start(objective: Objective, start: Array | None) -> Array:
