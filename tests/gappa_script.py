@@ -9,6 +9,7 @@ import re
 import subprocess
 from fractions import Fraction
 
+import mpmath
 import numpy as np
 
 from runtime_min.model import SealedModel, TrainedModel
@@ -22,13 +23,14 @@ def script(trained: TrainedModel, sealed: SealedModel) -> str:
     """Ask Gappa for the largest |device log-odds - trained log-odds| (two classes).
 
     Capitals are real numbers (training), small letters what the device has: X0 a real input, x0 its rounding. A real
-    is held within half a gap of the device limits, its rounding within the limits. A level is a number within the
+    is held within half a gap of the device limits, its rounding within the limits; a count is a whole number, there as
+    here. Both are of what the device delivers: of a value less its origin, the value. A level is a number within the
     hull of its device weights, as far from the trained one as the worst level is.
     """
-    definitions = [f"@rnd = {FORMATS[sealed.arithmetic]};"]
+    definitions = [f"@rnd = {FORMATS[sealed.arithmetic]};", "@whole = fixed<0, ne>;"]
     given: list[str] = []
     hints: list[str] = []
-    exact = Fraction(trained.intercept)
+    exact = Fraction(trained.intercept) + _prevalence(trained)
     computed, meant = _dyadic(Fraction(sealed.intercepts[0])), "B"
     for j, (entry, term) in enumerate(zip(sealed.inputs, sealed.terms, strict=True)):
         columns = [
@@ -45,10 +47,16 @@ def script(trained: TrainedModel, sealed: SealedModel) -> str:
             addend, real_addend = f"l{j}", f"L{j}"
         else:
             [(column, weight)] = columns
+            gain = Fraction(entry.counts.gain) if entry.counts else Fraction(1)
+            offset = Fraction(entry.counts.offset) if entry.counts else Fraction(entry.origin or 0)
             slope = Fraction(weight) / Fraction(column.scale)
             datum = Fraction(term.datum or 0)
-            exact += slope * (datum - Fraction(column.centre))
-            low, high = _reals(sealed.arithmetic, entry.low, entry.high)
+            exact += slope * (offset + gain * datum - Fraction(column.centre))
+            slope *= gain
+            low, high = Fraction(entry.low), Fraction(entry.high)
+            if entry.counts is None:
+                low, high = _reals(sealed.arithmetic, entry.low, entry.high)
+            definitions += [f"X{j} = whole(C{j});"] if entry.counts else []
             given += [f"X{j} in [{_dyadic(low)}, {_dyadic(high)}]"]
             given += [f"x{j} in [{_dyadic(Fraction(entry.low))}, {_dyadic(Fraction(entry.high))}]"]
             given += [f"W{j} in [{', '.join(_enclosure(slope))}]"]
@@ -68,6 +76,17 @@ def script(trained: TrainedModel, sealed: SealedModel) -> str:
         computed, meant = f"z{j}", f"Z{j}"
     given += [f"B in [{', '.join(_enclosure(exact))}]"]
     return "\n".join([*definitions, "{ " + " /\\\n  ".join(given), f"  -> {computed} - {meant} in ? }}", *hints, ""])
+
+
+def _prevalence(trained: TrainedModel) -> Fraction:
+    """logit(prevalence) - logit(weighted share of the event), to 60 digits and more."""
+    if trained.prevalence is None:
+        return Fraction(0)
+    with mpmath.workdps(70):
+        field = Fraction(trained.prevalence)
+        share = Fraction(trained.class_weights[1]) / sum(map(Fraction, trained.class_weights))
+        logits = [mpmath.log(mpmath.mpf(p.numerator) / (p.denominator - p.numerator)) for p in (field, share)]
+        return Fraction(str(logits[0] - logits[1]))
 
 
 def prove(text: str) -> Fraction:

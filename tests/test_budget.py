@@ -14,6 +14,7 @@ import pytest
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from models import (
+    ADC,
     CURRENT,
     FLOW,
     IMPELLER,
@@ -22,13 +23,14 @@ from models import (
     Quantity,
     make_request,
     make_trained,
+    sample_extended_models,
     sample_sealed_models,
 )
 from one_input import line
 
 from export.advice import advise
 from export.budget import Budget, derive
-from export.exact import trained_log_odds
+from export.exact import log_odds_of, trained_log_odds
 from export.interval import (
     Interval,
     difference_rounding,
@@ -40,10 +42,10 @@ from export.interval import (
 from export.witness import witness_misses
 from runtime_min import score
 from runtime_min.errors import SealError
-from runtime_min.model import DecisionRequest, SealedModel, TrainedModel, Witness
+from runtime_min.model import Counts, DecisionRequest, SealedModel, TrainedModel, Witness
 from runtime_min.sealing import fold, round_to, seal_request
 
-SAMPLES = sample_sealed_models()
+SAMPLES = {**sample_sealed_models(), **sample_extended_models()}
 DTYPES = {"binary32": np.float32, "binary64": np.float64}
 Pair = tuple[TrainedModel, SealedModel]
 ARITHMETICS = ("binary32", "binary64")
@@ -62,9 +64,9 @@ def bounds(budget: Budget) -> dict[str, Fraction]:
 
 
 def error(trained: TrainedModel, sealed: SealedModel, reals: list[Fraction]) -> Fraction:
-    """|device - trained| at real inputs, each rounded once to the arithmetic."""
+    """|device - trained| at what the device delivers, each rounded once to the arithmetic."""
     device = score.log_odds(sealed, [round_to(sealed.arithmetic, real) for real in reals])
-    return abs(Fraction(device) - trained_log_odds(trained, reals)[0])
+    return abs(Fraction(device) - log_odds_of(trained, sealed, reals)[0])
 
 
 # --- derived by hand --------------------------------------------------------------------------------------------------
@@ -261,9 +263,19 @@ def models(draw: st.DrawFn) -> tuple[TrainedModel, SealedModel]:
             continue
         low = draw(st.decimals(-1000, 1000, places=3))
         width = draw(st.decimals("0.001", 1_000_000, places=3))
-        quantities.append(Quantity(f"q{position}", "", str(low), str(low + width)))
+        origin = str(draw(st.decimals(-1000, 1000, places=2))) if draw(st.booleans()) else None
+        counts = None
+        if origin is None and draw(st.booleans()):
+            # Signed or falling counts over the width and a little more, of 5 to 20 bits.
+            bits, signed = draw(st.integers(5, 20)), draw(st.booleans())
+            gain = Fraction(width) / 2 ** (bits - 1) * draw(st.sampled_from((1, -1)))
+            middle = 0 if signed else 2 ** (bits - 1)
+            counts = Counts(bits, str(gain), str(Fraction(low + width / 2) - gain * middle), signed, False)
+        quantities.append(Quantity(f"q{position}", "", str(low), str(low + width), origin=origin, counts=counts))
     seed = draw(st.integers(0, 2**32))
-    trained = make_trained(quantities, seed, weight_sd=draw(st.sampled_from((0.01, 1.0, 100.0))))
+    prevalence = draw(st.sampled_from((None, "0.02", "1/3")))
+    weight_sd = draw(st.sampled_from((0.01, 1.0, 100.0)))
+    trained = make_trained(quantities, seed, weight_sd=weight_sd, prevalence=prevalence)
     return trained, seal_request(trained, make_request(quantities, arithmetic=draw(st.sampled_from(ARITHMETICS))))
 
 
@@ -282,6 +294,7 @@ def test_no_real_input_errs_by_more_than_the_budget(
             else Fraction(entry.low) + data.draw(share) * (Fraction(entry.high) - Fraction(entry.low))
             for entry in sealed.inputs
         ]
+        reals = [Fraction(round(x)) if e.counts else x for e, x in zip(sealed.inputs, reals, strict=True)]
         assert error(trained, sealed, reals) <= budget.log_odds
 
 
@@ -301,11 +314,13 @@ def test_device_probability_lies_within_its_bound(name: str) -> None:
     trained, sealed = SAMPLES[name]
     budget = derive(trained, sealed)
     bound = mpmath.mpf(budget.probability.numerator) / budget.probability.denominator
-    for row in trained.witness:
-        reals = [Fraction(value) for value in row.inputs]
+    rng = np.random.default_rng(3)
+    for _ in range(12):
+        reals = [Fraction(int(rng.integers(entry.low, entry.high, endpoint=True))) if entry.counts or entry.levels else
+                 Fraction(rng.uniform(entry.low, entry.high)) for entry in sealed.inputs]
         device = score.probability(sealed, [round_to(sealed.arithmetic, real) for real in reals])
         with mpmath.workdps(40):
-            z = trained_log_odds(trained, reals)[0]
+            z = log_odds_of(trained, sealed, reals)[0]
             exact = 1 / (1 + mpmath.exp(-mpmath.mpf(z.numerator) / z.denominator))
             assert abs(mpmath.mpf(device) - exact) <= bound
 
@@ -319,7 +334,7 @@ def test_reach_is_the_range_of_trained_log_odds_over_the_corners(name: str) -> N
         ),
         1000,
     )
-    found = [trained_log_odds(trained, [Fraction(value) for value in corner])[0] for corner in corners]
+    found = [log_odds_of(trained, sealed, [Fraction(value) for value in corner])[0] for corner in corners]
     low, high = derive(trained, sealed).reach
     assert low <= min(found)
     assert max(found) <= high
@@ -345,8 +360,58 @@ def test_outside_the_band_the_device_decides_as_the_exact_threshold_does() -> No
     assert 0 < inside < 800
 
 
+def test_each_threshold_of_a_no_call_has_its_band() -> None:
+    # ln(1/3) -+ 0.7, by mpmath.
+    trained, sealed = line("-3", "4", weight=1.3, scale=0.7, decision=DecisionRequest("1", "3", None, "0.7"))
+    budget = derive(trained, sealed)
+    assert len(budget.bands) == 2
+    for band, half_width in zip(budget.bands, (-1, 1), strict=True):
+        with mpmath.workdps(30):
+            exact = mpmath.log(mpmath.mpf(1) / 3) + half_width * mpmath.mpf(7) / 10
+            assert band[0] <= exact - float(budget.log_odds)
+            assert exact + float(budget.log_odds) <= band[1]
+            assert band[1] - band[0] <= 2 * float(budget.log_odds + budget.threshold) * 1.0001
+
+
+def test_prevalence_moves_the_trained_log_odds_by_the_difference_of_the_logits() -> None:
+    # Saerens, Latinne and Decaestecker 2002; a quarter of the fitted rows are events.
+    trained = make_trained([SUCTION], 1)
+    moved = replace(trained, prevalence="0.02")
+    with mpmath.workdps(30):
+        shift = mpmath.log(mpmath.mpf(2) / 98) - mpmath.log(mpmath.mpf(1) / 3)
+        found = trained_log_odds(moved, [Fraction(3)])[0] - trained_log_odds(trained, [Fraction(3)])[0]
+        assert abs(mpmath.mpf(found.numerator) / found.denominator - shift) < mpmath.mpf(10) ** -25
+
+
+@pytest.mark.parametrize("times", [0, 2])
+def test_prevalence_left_out_or_counted_twice_makes_the_budget_large(times: int) -> None:
+    trained, sealed = SAMPLES["rare_binary32"]
+    shift = float(trained_log_odds(trained, [Fraction(0)] * 2)[0]) - float(
+        trained_log_odds(replace(trained, prevalence=None), [Fraction(0)] * 2)[0]
+    )
+    wrong = replace(sealed, intercepts=(sealed.intercepts[0] + (times - 1) * shift,))
+    budget = derive(trained, wrong)
+    assert budget.log_odds > 5
+    assert witness_misses(trained, wrong, derive(trained, sealed)).rows
+
+
+def test_counts_cost_no_rounding_of_the_input_and_an_origin_that_of_the_difference() -> None:
+    # 102,400 to 104,448 Pa: half a unit is 2^-8 (and 2^-37 where binary64 comes first), up to 1,024 from the origin it
+    # is 2^-14, above it by one bit.
+    def input_bound(**given: object) -> Fraction:
+        trained = make_trained([Quantity("x", "Pa", "102400", "104448", **given)], 1)  # type: ignore[arg-type]
+        trained = replace(trained, terms=(replace(trained.terms[0], scale=1.0),))
+        trained = replace(trained, scores=(replace(trained.scores[0], weights=(1.0,)),))
+        quantity = Quantity("x", "Pa", "102400", "104448", **given)  # type: ignore[arg-type]
+        return bounds(derive(trained, seal_request(trained, make_request([quantity])))).get("input", Fraction(0))
+
+    assert input_bound() == two(-8) + two(-37)
+    assert input_bound(origin="103424") == two(-14) + two(-43)
+    assert input_bound(counts=Counts(12, "1", "102000", False, False)) == 0
+
+
 def test_exact_log_odds_agree_with_the_exact_fold() -> None:
-    for trained, sealed in SAMPLES.values():
+    for trained, sealed in sample_sealed_models().values():
         folded = fold(trained)[0]
         inputs = [Fraction(value) for value in trained.witness[0].inputs]
         columns = [
@@ -412,6 +477,18 @@ def test_witness_off_by_more_than_budget_and_bound_is_a_miss() -> None:
     misses = witness_misses(replace(trained, witness=rows), sealed, budget)
     assert (misses.rows, misses.compared) == ((1,), 2)
     assert misses.largest == pytest.approx(1.001, rel=1e-4)
+
+
+def test_witness_is_moved_to_the_count_that_the_device_has() -> None:
+    # 0.04 kPa lies 0.4 of a count from its count: in the rows it is not quantised.
+    trained = make_trained([ADC], 1)
+    trained = replace(trained, witness=(), scores=(replace(trained.scores[0], weights=(2.0,)),))
+    sealed = seal_request(trained, make_request([ADC]))
+    budget = derive(trained, sealed)
+    said = float(trained_log_odds(trained, [Fraction("0.04")])[0])
+    for off, missed in ((0.0, ()), (float(budget.log_odds) * 1.5, (0,))):
+        row = Witness((0.04,), (said + off,), (1e-15,))
+        assert witness_misses(replace(trained, witness=(row,)), sealed, budget).rows == missed
 
 
 # --- advice -----------------------------------------------------------------------------------------------------------
