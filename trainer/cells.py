@@ -144,7 +144,8 @@ def _numbers(lines: Sequence[int], cells: Cells, column: Column, findings: Findi
     for at in np.flatnonzero(~np.isfinite(values)).tolist():
         cell = cells[at] if isinstance(cells, list) else texts_of(cells[at : at + 1])[0]
         if cell:
-            findings.add(lines[at], column, *not_a_number(cell, column.refusal))
+            todo = column.missing or "leave the field empty where a value is missing"
+            findings.add(lines[at], column, *not_a_number(cell, column.refusal, todo))
             values[at] = np.nan
     if column.limits:
         low, high = column.limits
@@ -186,10 +187,10 @@ def _number(cell: str) -> float:
         return math.nan
 
 
-def not_a_number(cell: str, refusal: str) -> tuple[str, str]:
+def not_a_number(cell: str, refusal: str, if_not_finite: str) -> tuple[str, str]:
     """(what was found, what to do) of a cell that is no finite number."""
     if cell.strip().lower().lstrip("+-") in ("nan", "inf", "infinity"):
-        return f"found {shown(cell)}, not a finite number", "leave the field empty where a value is missing"
+        return f"found {shown(cell)}, not a finite number", if_not_finite
     if math.isinf(_number(cell)):
         return f"found {shown(cell)}, too large for binary64", "correct it"
     return f"found {shown(cell)}, not a number", refusal

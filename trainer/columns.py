@@ -15,6 +15,7 @@ from trainer.plan import InputPlan, Plan
 from trainer.plan_checks import shown
 from trainer.plan_rows import named_columns
 
+_LEAVE_EMPTY = "leave the field empty where a value is missing"
 _NAME_ALL = "name every input with [[input]] in the plan"
 
 
@@ -83,7 +84,7 @@ def settled(columns: Columns, where: str) -> tuple[tuple[InputPlan, ...], list[F
             codes = column.codes or {}
             if not np.isnan(numbers).all():
                 place, text = column.first_text
-                problems.append(Problem(place, *not_a_number(text, column.refusal)))
+                problems.append(Problem(place, *not_a_number(text, column.refusal, _LEAVE_EMPTY)))
             elif len(codes) > MOST_LEVELS:
                 found = f"found more than {MOST_LEVELS} different texts"
                 todo = f"remove the column, or {_NAME_ALL}"

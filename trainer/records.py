@@ -9,7 +9,6 @@ from __future__ import annotations
 import csv
 import hashlib
 from collections.abc import Iterator
-from itertools import islice
 from pathlib import Path
 from typing import BinaryIO
 
@@ -21,6 +20,7 @@ LONGEST_RECORD = 1_000_000
 
 MOST_COLUMNS = 4096
 _BLOCK_RECORDS = 4096
+_BLOCK_BYTES = 2_000_000
 
 # What the csv module says of a broken record -> our sentence.
 _BROKEN = (
@@ -48,13 +48,24 @@ class CsvFile:
         """The rows that have as many fields as the header; the others become problems."""
         width = len(self.header)
         todo = "give each row one field a column, in quotes where a field holds a comma"
-        while block := list(islice(self._records, _BLOCK_RECORDS)):
+        for block in self._record_blocks():
             whole = [record for record in block if len(record[1]) == width]
             for line, fields in block if len(whole) < len(block) else ():
                 if len(fields) != width:
                     count = f"{len(fields)} field{'s' if len(fields) > 1 else ''}"
                     findings.add(line, None, f"found {count} where the header has {width}", todo)
             yield Block([line for line, _ in whole], _Fields(whole))
+
+    def _record_blocks(self) -> Iterator[list[tuple[int, list[str]]]]:
+        block: list[tuple[int, list[str]]] = []
+        end = self._lines.bytes + _BLOCK_BYTES
+        for record in self._records:
+            block.append(record)
+            if len(block) == _BLOCK_RECORDS or self._lines.bytes >= end:
+                yield block
+                block, end = [], self._lines.bytes + _BLOCK_BYTES
+        if block:
+            yield block
 
     def sha256(self) -> str:
         """Of the file's bytes, all of which were read."""
@@ -77,6 +88,7 @@ class Lines:
         self._digest = hashlib.sha256()
         self.where = where
         self.number = 0
+        self.bytes = 0
         self.record_bytes = 0
 
     @property
@@ -91,6 +103,7 @@ class Lines:
         if not raw:
             raise StopIteration
         self.number += 1
+        self.bytes += len(raw)
         self.record_bytes += len(raw)
         if self.record_bytes > LONGEST_RECORD:
             found = f"found a row of more than {LONGEST_RECORD} bytes"
