@@ -17,7 +17,7 @@ from c_programs import FAMILIES, C, compiled, compiler, header, need, run_header
 from hypothesis import given
 from hypothesis import strategies as st
 from line_models import HOSTILE, line_model, named_model, with_text
-from models import FLOW, SUCTION, Quantity, make_request, make_trained, sample_sealed_models
+from models import FLOW, SUCTION, make_request, make_trained, sample_sealed_models
 
 from export.targets import Vector
 from export.targets.c import lexical
@@ -177,14 +177,6 @@ def test_inputs_may_have_the_names_of_c_itself(tmp_path: Path) -> None:
         run = run_header(header(sealed), sealed, Way(compiler("gcc"), "c", ("-std=c99", "-O1")), tmp_path)
         assert (run.trouble, run.self_test) == (None, 0)
         assert list(run.outputs) == [vector.expected for vector in make_vectors(sealed)]
-
-
-def test_two_inputs_of_one_name_in_c_are_refused_by_name() -> None:
-    quantities = [replace(FLOW, name="flow", unit="m"), Quantity("flow_m", "", "0", "1")]
-    sealed = seal_request(make_trained(quantities, 3), make_request(quantities))
-    with pytest.raises(ReleaseError) as caught:
-        header(sealed)
-    assert str(caught.value) == 'input "flow_m": has the name FLOW_M in C, as has "flow"; rename one of them'
 
 
 def test_name_that_is_no_identifier_is_refused() -> None:
