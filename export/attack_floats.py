@@ -21,7 +21,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from export.attack_effort import CHUNK, Effort, Found, every_row, row_count
+from export.attack_effort import CHUNK, Effort, Found, every_row, largest, row_count
 from export.exact import datums, device_intercept, device_weights, log_odds_of, slopes
 from runtime_min.model import SealedModel, TrainedModel
 
@@ -65,7 +65,7 @@ def search_floats(trained: TrainedModel, sealed: SealedModel, k: int, rng: np.ra
     """The best rows found for class k + 1, best first, and how many were tried."""
     line = _line(trained, sealed, k)
     with np.errstate(all="ignore"):
-        count = row_count(sealed)
+        count = row_count(sealed, size.every)
         if count is not None:
             best = np.zeros((0, len(sealed.inputs)), line.dtype)
             for rows in every_row(sealed, CHUNK):
@@ -189,7 +189,7 @@ def _search(line: _Line, rng: np.random.Generator, size: Effort) -> tuple[Floats
 
 def _best(line: _Line, rows: Floats, count: int) -> Floats:
     harm = np.nan_to_num(_run(line, rows).harm(), nan=-1.0)
-    return rows[np.argsort(-harm, kind="stable")[:count]]
+    return rows[largest(harm, count)]
 
 
 def _column(line: _Line, rng: np.random.Generator, position: int, count: int) -> Floats:

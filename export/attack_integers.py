@@ -4,7 +4,7 @@ The accumulator is exact, so that the error of a row is what its numbers are off
 
     e(n) = (b - T(d)) + sum_j (u_j 2^s_j - w_j) (n_j - d_j),
 
-and where the tool chose the counts, half a count times |w_j| with whichever sign hurts. Every row is tried where there
+and where the tool chose the counts, half a count times |w_j| with whichever sign hurts, the same for all. Every row is tried where there
 are few enough; else uniform rows, corners, rows grown input by input (a beam) and changes of the best. Rows next to the
 limits and far from them are handed on too, so that the reference scorer is held against this picture of it.
 """
@@ -17,8 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from export.attack_effort import CHUNK, Effort, Found, every_row, row_count
-from export.budget_items import input_rounding
+from export.attack_effort import CHUNK, EVERY_ROW, Effort, Found, every_row, largest, row_count
 from export.exact import datums, device_intercept, device_weights, log_odds_of, slopes
 from runtime_min.model import SealedModel, TrainedModel
 
@@ -28,7 +27,7 @@ Floats = npt.NDArray[np.float64]
 
 @dataclass(frozen=True)
 class _Line:
-    """The differences between one score of both models, in log-odds; `halves`: what reals can add, all in all."""
+    """The differences between one score of both models, in log-odds."""
 
     lows: Ints
     highs: Ints
@@ -36,7 +35,6 @@ class _Line:
     datums: Ints
     start: float
     off: tuple[Floats, ...]
-    halves: float
 
 
 def search_integers(
@@ -45,7 +43,7 @@ def search_integers(
     """The best rows found for class k + 1 and as many chosen at random, and how many were tried."""
     line = _line(trained, sealed, k)
     some = _uniform(line, rng, size.uniform)
-    count = row_count(sealed)
+    count = row_count(sealed, EVERY_ROW)
     if count is not None:
         best = np.zeros((0, len(line.levels)), np.int64)
         for rows in every_row(sealed, CHUNK):
@@ -78,10 +76,6 @@ def _line(trained: TrainedModel, sealed: SealedModel, k: int) -> _Line:
         np.array([float(u - w) for u, w in zip(device_weights(sealed, k, at), exact[at], strict=True)])
         for at in positions
     ]
-    halves = [
-        0 if entry.levels else abs(exact[at][0]) * input_rounding(sealed.arithmetic, entry)
-        for at, entry in enumerate(sealed.inputs)
-    ]
     return _Line(
         lows=np.array([int(entry.low) for entry in sealed.inputs], np.int64),
         highs=np.array([int(entry.high) for entry in sealed.inputs], np.int64),
@@ -89,7 +83,6 @@ def _line(trained: TrainedModel, sealed: SealedModel, k: int) -> _Line:
         datums=np.array([int(datum) for datum in datums(sealed)], np.int64),
         start=float(device_intercept(sealed, k) - log_odds_of(trained, sealed, datums(sealed))[k]),
         off=tuple(off),
-        halves=float(sum(halves)),
     )
 
 
@@ -105,11 +98,7 @@ def _best(line: _Line, rows: Ints, count: int) -> Ints:
     error = np.full(len(rows), line.start)
     for position in range(rows.shape[1]):
         error += _errors(line, position, rows[:, position])
-    harm = np.abs(error) + line.halves
-    if len(rows) > 4 * count:
-        near = np.argpartition(-harm, count)[:count]
-        return rows[near[np.argsort(-harm[near], kind="stable")]]
-    return rows[np.argsort(-harm, kind="stable")[:count]]
+    return rows[largest(np.abs(error), count)]
 
 
 def _uniform(line: _Line, rng: np.random.Generator, count: int) -> Ints:

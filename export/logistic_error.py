@@ -53,7 +53,8 @@ def table_error(table: Table, shift: int) -> Fraction:
 def _plateaux(table: Table) -> Iterator[tuple[tuple[int, int], tuple[int, int]]]:
     """(first argument, q), (last argument, q) of every run of arguments between two nodes with the same q.
 
-    q = low + ((rise * f + 2^(h - 1)) >> h) is low + v from f = ceil((v 2^h - 2^(h - 1)) / rise) on.
+    q = low + ((rise * f + 2^(h - 1)) >> h) is low + v from f = ceil((v 2^h - 2^(h - 1)) / rise) on; f belongs to the
+    2^drop arguments from f 2^drop on.
     """
     width = 1 << table.step
     half = width >> 1
@@ -63,8 +64,9 @@ def _plateaux(table: Table) -> Iterator[tuple[tuple[int, int], tuple[int, int]]]
         for v, first in enumerate(firsts):
             last = (firsts[v + 1] if v < rise else width) - 1
             if first <= last:
-                yield (start + first, low + v), (start + last, low + v)
-    beyond = (len(table.nodes) - 1) * width
+                ends = (start + first) << table.drop, ((start + last + 1) << table.drop) - 1
+                yield (ends[0], low + v), (ends[1], low + v)
+    beyond = (len(table.nodes) - 1) * width << table.drop
     yield (beyond, table.nodes[-1]), (beyond, table.nodes[-1])
 
 
