@@ -17,7 +17,8 @@ import numpy as np
 
 from export.targets import Output, SelfTest, Vector
 from runtime_min import arithmetic, score
-from runtime_min.model import SealedModel
+from runtime_min.integer_score import missing_count
+from runtime_min.model import INTEGERS, Input, SealedModel
 from runtime_min.validity import device_numbers
 
 RANDOM_ROWS = 300
@@ -31,25 +32,21 @@ Row = tuple[float, ...]
 
 def expected(sealed: SealedModel, inputs: Sequence[float]) -> Output:
     """What the reference scorer says of one row, as raw bits."""
-    fault, values = score.prepared(sealed, inputs)
-    kind = sealed.arithmetic
-    if fault:
-        nan = arithmetic.raw_bits(math.nan, kind)
-        blank = (nan,) * len(sealed.intercepts)
-        return Output(fault, blank, blank, score.FAULT)
-    log_odds = score.scores(sealed, values)
-    probability = [arithmetic.logistic(z, sealed.exponential, arithmetic.ROUND[kind]) for z in log_odds]
+    fault, log_odds, probability, decision = score.outputs(sealed, inputs)
     return Output(
-        0,
-        tuple(arithmetic.raw_bits(z, kind) for z in log_odds),
-        tuple(arithmetic.raw_bits(p, kind) for p in probability),
-        score.decide(sealed, inputs),
+        fault,
+        tuple(arithmetic.raw_bits(z, sealed.arithmetic) for z in log_odds),
+        tuple(arithmetic.raw_bits(p, sealed.arithmetic) for p in probability),
+        decision,
     )
 
 
 def table_crc(sealed: SealedModel) -> int:
-    """CRC-32 (ISO-HDLC) over the bits of every device number, least significant byte first."""
-    width = 4 if sealed.arithmetic == "binary32" else 8
+    """CRC-32 (ISO-HDLC) over the bits of every device number, least significant byte first.
+
+    In int16 each takes 4 bytes and in int32 8, the accumulator's width, in two's complement.
+    """
+    width = 4 if sealed.arithmetic in ("binary32", "int16") else 8
     data = b"".join(
         arithmetic.raw_bits(number, sealed.arithmetic).to_bytes(width, "little") for _, number in device_numbers(sealed)
     )
@@ -81,6 +78,8 @@ def self_test_of(sealed: SealedModel, vectors: Sequence[Vector]) -> SelfTest:
 
 def random_row(sealed: SealedModel, rng: random.Random) -> Row:
     """One row, uniform over the ranges, of numbers of the arithmetic."""
+    if sealed.arithmetic in INTEGERS:
+        return tuple(rng.randint(int(entry.low), int(entry.high)) for entry in sealed.inputs)
     rounded = arithmetic.ROUND[sealed.arithmetic]
     return tuple(
         float(rng.randrange(len(entry.levels)))
@@ -92,6 +91,8 @@ def random_row(sealed: SealedModel, rng: random.Random) -> Row:
 
 def next_to(value: float, towards: float, kind: str) -> float:
     """The neighbour of `value` in the arithmetic, towards `towards`."""
+    if kind in INTEGERS:
+        return int(value) + (towards > value) - (towards < value)
     if kind == "binary32":
         return float(np.nextafter(np.float32(value), np.float32(towards)))
     return math.nextafter(value, towards)
@@ -131,7 +132,11 @@ def _next_to_threshold(sealed: SealedModel, rng: random.Random) -> Iterator[Row]
 def _bracket(sealed: SealedModel, row: list[float], position: int, threshold: float) -> tuple[Row, Row] | None:
     """Bisect one input until two neighbouring numbers stand on either side of the threshold."""
     entry = sealed.inputs[position]
-    rounded = arithmetic.ROUND[sealed.arithmetic]
+
+    def middle_of(below: float, above: float) -> float:
+        if sealed.arithmetic in INTEGERS:
+            return (int(below) + int(above)) // 2
+        return arithmetic.ROUND[sealed.arithmetic](below + (above - below) / 2)
 
     def at(value: float) -> Row:
         return (*row[:position], value, *row[position + 1 :])
@@ -142,7 +147,7 @@ def _bracket(sealed: SealedModel, row: list[float], position: int, threshold: fl
     if not score.log_odds(sealed, at(below)) < threshold <= score.log_odds(sealed, at(above)):
         return None
     while next_to(below, above, sealed.arithmetic) != above:
-        middle = rounded(below + (above - below) / 2)
+        middle = middle_of(below, above)
         if middle in (below, above):
             middle = next_to(below, above, sealed.arithmetic)
         if score.log_odds(sealed, at(middle)) < threshold:
@@ -156,13 +161,25 @@ def _policy_rows(sealed: SealedModel, rng: random.Random) -> Iterator[Row]:
     """For every input: missing, infinite, on and one step beyond each limit, no level; then several at once."""
     kind = sealed.arithmetic
     for position, entry in enumerate(sealed.inputs):
-        odd = [math.nan, math.inf, -math.inf, entry.low, entry.high, -0.0]
-        odd += [next_to(entry.low, -math.inf, kind), next_to(entry.high, math.inf, kind)]
-        if entry.levels:
-            odd += [0.5, len(entry.levels) - 1.5, float(len(entry.levels)), -1.0]
-        for value in odd:
+        for value in _odd_counts(sealed, entry) if kind in INTEGERS else _odd_floats(entry, kind):
             row = random_row(sealed, rng)
             yield (*row[:position], value, *row[position + 1 :])
+    missing, beyond = (missing_count(sealed), -missing_count(sealed) - 1) if kind in INTEGERS else (math.nan, math.inf)
     for _ in range(8):
-        yield tuple(rng.choice((value, math.nan, math.inf)) for value in random_row(sealed, rng))
-    yield (math.nan,) * len(sealed.inputs)
+        yield tuple(rng.choice((value, missing, beyond)) for value in random_row(sealed, rng))
+    yield (missing,) * len(sealed.inputs)
+
+
+def _odd_floats(entry: Input, kind: str) -> list[float]:
+    odd = [math.nan, math.inf, -math.inf, entry.low, entry.high, -0.0]
+    odd += [next_to(entry.low, -math.inf, kind), next_to(entry.high, math.inf, kind)]
+    if entry.levels:
+        odd += [0.5, len(entry.levels) - 1.5, float(len(entry.levels)), -1.0]
+    return odd
+
+
+def _odd_counts(sealed: SealedModel, entry: Input) -> list[float]:
+    """Missing, the ends of the type, and on and beyond each limit, as far as the type reaches."""
+    missing = missing_count(sealed)
+    odd = [missing, missing + 1, -missing - 1, entry.low - 1, entry.low, entry.high, entry.high + 1, 0, -1]
+    return [value for value in odd if missing <= value < -missing]

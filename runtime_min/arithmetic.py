@@ -1,4 +1,4 @@
-"""binary64 and binary32: what one step does on each.
+"""binary64 and binary32: what one step does on each; int16 and int32: how wide their numbers are.
 
 Every function here runs under MicroPython too: no dataclasses, typing, fractions; names of constants come from the
 sealed model that is passed in, so that a later version of this file cannot change the bits of an old model.
@@ -25,6 +25,11 @@ NAN = float("nan")
 INFINITY = float("inf")
 
 CONSTANTS: "dict[str, dict[str, Any]]" = {"binary32": BINARY32, "binary64": BINARY64}
+
+
+# Of int16 and int32: each weight, and log-odds with everything that is added to them or compared with them.
+WEIGHT_BITS = {"int16": 16, "int32": 32}
+ACCUMULATOR_BITS = {"int16": 32, "int32": 64}
 
 
 def round_binary64(x: float) -> float:
@@ -70,14 +75,22 @@ def logistic(z: float, constants: "Exponential", rounded: "Rounding") -> float:
 
 
 def raw_bits(x: float, arithmetic: str) -> int:
-    """The bits of x as an unsigned integer; every NaN gives the quiet NaN 0x7FC00000 (0x7FF8000000000000)."""
+    """The bits of x as an unsigned integer; every NaN gives the quiet NaN 0x7FC00000 (0x7FF8000000000000).
+
+    In integers x is an int, and its bits are the two's complement in the accumulator's width.
+    """
+    if arithmetic in ACCUMULATOR_BITS:
+        return int(x) & ((1 << ACCUMULATOR_BITS[arithmetic]) - 1)
     if arithmetic == "binary32":
         return 0x7FC00000 if x != x else int(struct.unpack("<I", struct.pack("<f", x))[0])
     return 0x7FF8000000000000 if x != x else int(struct.unpack("<Q", struct.pack("<d", x))[0])
 
 
 def from_bits(bits: int, arithmetic: str) -> float:
-    """The number whose bits are given."""
+    """The number whose bits are given; in integers an int."""
+    if arithmetic in ACCUMULATOR_BITS:
+        half = 1 << (ACCUMULATOR_BITS[arithmetic] - 1)
+        return bits - 2 * half if bits >= half else bits
     if arithmetic == "binary32":
         return float(struct.unpack("<f", struct.pack("<I", bits))[0])
     return float(struct.unpack("<d", struct.pack("<Q", bits))[0])

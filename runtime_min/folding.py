@@ -103,11 +103,17 @@ def prevalence_shift(trained: TrainedModel) -> Fraction:
 
 
 def delivered_limits(entry: InputRequest) -> tuple[Fraction, Fraction]:
-    """The exact limits of what the device delivers; of counts, the whole numbers inside the range and the bits."""
+    """The exact limits of what the device delivers; of counts, the whole numbers inside the range and the bits.
+
+    Counts that sealing chose stand for readings rounded to the nearest count, and so do their limits: a reading on a
+    limit is within it.
+    """
     gain, offset = unit_map(entry)
     ends = sorted((Fraction(str(end)) - offset) / gain for end in (entry.low, entry.high))
     if entry.counts is None:
         return ends[0], ends[1]
+    if entry.counts.chosen:
+        return Fraction(round(ends[0])), Fraction(round(ends[1]))
     least, most = count_limits(entry.counts)
     return Fraction(max(math.ceil(ends[0]), least)), Fraction(min(math.floor(ends[1]), most))
 

@@ -17,7 +17,7 @@ from functools import cached_property
 
 FLOATS = ("binary64", "binary32")
 INTEGERS = ("int16", "int32")
-ARITHMETICS = FLOATS
+ARITHMETICS = FLOATS + INTEGERS
 """How a target computes."""
 
 FAULT = -2

@@ -23,9 +23,19 @@ from runtime_min.folding import (
     thresholds_of,
     unit_map,
 )
-from runtime_min.model import ARITHMETICS, About, DecisionRequest, InputRequest, Request, SealedModel, TrainedModel
+from runtime_min.model import (
+    ARITHMETICS,
+    INTEGERS,
+    About,
+    DecisionRequest,
+    InputRequest,
+    Request,
+    SealedModel,
+    TrainedModel,
+)
 from runtime_min.names import exact_decimal, name_problem
 from runtime_min.sealing_floats import seal_floats
+from runtime_min.sealing_integers import seal_integers
 from runtime_min.validity import sealed_problems
 from runtime_min.validity_request import decision_problems, delivery_problems
 from runtime_min.validity_rules import shown
@@ -70,7 +80,9 @@ def seal_request(
     problems = list(_asked_wrongly(trained, request))
     if problems:
         raise SealError(problems)
-    sealed = seal_floats(trained, request, About(purpose, request, trained.rows.sha256, plan_sha256, TOOL))
+    about = About(purpose, request, trained.rows.sha256, plan_sha256, TOOL)
+    sealing = seal_integers if request.arithmetic in INTEGERS else seal_floats
+    sealed = sealing(trained, request, about)
     found = sealed_problems(sealed)
     if found:
         raise SealError(Problem(*problem) for problem in found)

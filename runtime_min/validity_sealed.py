@@ -5,10 +5,11 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 
-from runtime_min.arithmetic import ROUND
+from runtime_min.arithmetic import ACCUMULATOR_BITS, ROUND
 from runtime_min.device_numbers import device_numbers
-from runtime_min.model import ARITHMETICS, Counts, Input, SealedModel
+from runtime_min.model import ARITHMETICS, INTEGERS, Counts, Input, SealedModel
 from runtime_min.names import c_position_name, name_problem
+from runtime_min.proof import proof
 from runtime_min.validity_request import delivery_problems, request_problems
 from runtime_min.validity_rules import AGAIN, Found, class_problems, digest_problems, distinct
 
@@ -40,7 +41,7 @@ def _sealed(sealed: SealedModel) -> Iterator[Found]:
     yield from _terms(sealed)
     if not sealed.decision.low <= sealed.decision.high:
         yield "model.decision", "found low above high", AGAIN
-    yield from _floats(sealed)
+    yield from _integers(sealed) if sealed.arithmetic in INTEGERS else _floats(sealed)
     yield from digest_problems("about.rows_sha256", sealed.about.rows_sha256)
     yield from digest_problems("about.plan_sha256", sealed.about.plan_sha256)
     yield from request_problems(sealed)
@@ -100,6 +101,53 @@ def _floats(sealed: SealedModel) -> Iterator[Found]:
     for place, number in device_numbers(sealed):
         if rounded(number) != number or math.copysign(1.0, number) < 0 == number:
             yield place, f"found {number!r}", f"expected a {sealed.arithmetic} number"
+
+
+def _integers(sealed: SealedModel) -> Iterator[Found]:
+    """What integers carry, nothing of floating point, and that no step of a device overflows."""
+    told = list(_integer_fields(sealed))
+    yield from told
+    if not told:
+        for step in proof(sealed):
+            if not step.fits:
+                of = f' of "{step.of}"' if step.of else ""
+                found = f"{step.what}{of} comes to {step.largest}, beyond a signed integer of {step.bits} bits"
+                yield "model", found, AGAIN
+
+
+def _integer_fields(sealed: SealedModel) -> Iterator[Found]:
+    if sealed.exponential is not None:
+        yield "model.exponential", "found constants", f"{sealed.arithmetic} has none"
+    most = ACCUMULATOR_BITS[sealed.arithmetic] - 2
+    if sealed.accumulator_shift is None or not 0 <= sealed.accumulator_shift <= most:
+        yield "model.accumulator_shift", f"found {sealed.accumulator_shift}", f"expected 0 to {most}"
+    table = sealed.table
+    if table is None:
+        yield "model.table", "found null", f"{sealed.arithmetic} needs one"
+    else:
+        if not 0 <= table.drop < most or not 1 <= table.step <= 30:
+            yield "model.table", f"found drop {table.drop} and step {table.step}", AGAIN
+        nodes = list(table.nodes)
+        if len(nodes) < 2 or nodes[0] != 2**14 or nodes[-1] > 2**15 or nodes != sorted(nodes):
+            yield "model.table.nodes", "found others than 16384 and on upwards to 32768 at most", AGAIN
+    for position, term in enumerate(sealed.terms):
+        place = f"model.terms[{position}]"
+        if term.form == "value" and term.datum is None:
+            yield f"{place}.datum", "found null", "a count has a datum"
+        if (term.shift is None) == (term.form == "value") or not 0 <= (term.shift or 0) <= most:
+            yield f"{place}.shift", f"found {term.shift}", "a count has one, a level has none"
+        if len(term.of) != 1 or not 0 <= term.of[0] < len(sealed.inputs) or not all(term.weights):
+            yield f"{place}", "is of no input", AGAIN
+    if any(len(term.weights) != len(sealed.intercepts) for term in sealed.terms):
+        yield "model.terms", "found weights for another number of classes", AGAIN
+    for position, entry in enumerate(sealed.inputs):
+        if not entry.levels and entry.counts is None:
+            yield f"model.inputs[{position}].counts", "found null", "integers need them"
+        if entry.origin is not None:
+            yield f"model.inputs[{position}].origin", f'found "{entry.origin}"', "counts have an offset"
+    for place, number in device_numbers(sealed):
+        if not isinstance(number, int):
+            yield place, f"found {number!r}", f"expected an integer in {sealed.arithmetic}"
 
 
 def _input(place: str, entry: Input) -> Iterator[Found]:

@@ -199,6 +199,35 @@ def sample_extended_models() -> dict[str, tuple[TrainedModel, SealedModel]]:
     return models
 
 
+def sample_integer_models() -> dict[str, tuple[TrainedModel, SealedModel]]:
+    """int16 and int32, with counts and without, levels, every policy, a prevalence, a no-call; (trained, sealed)."""
+    rng = random.Random(20)
+    many = [_random_quantity(rng, position) for position in range(24)]
+    pump = [SUCTION, FLOW, CURRENT, VIBRATION, WATER, IMPELLER]
+    at = DecisionRequest(None, None, "0.375")
+    # 16 bits without a sign do not fit a signed count of 16 bits: every input of that model is 32 bits wide.
+    hall = Quantity("hall", "mV", "0", "5000", counts=Counts(16, "5000/65535", "0", False, False))
+    kinds = {
+        "one_input": ([SUCTION], {"intercept": 0.5}, {"decision": at}),
+        "pump": (pump, {}, {}),
+        "counts": ([ADC, SHUNT, FALLING, IMPELLER], {}, {}),
+        "wide": ([hall, WIDE, ADC], {}, {}),
+        "levels_only": ([IMPELLER, VALVE], {"intercept": 0.5}, {"decision": at}),
+        "rare": ([SUCTION, FLOW, VALVE], {"prevalence": "0.001"}, {"decision": NO_CALL}),
+        "many": (many, {}, {}),
+        "steep": ([SUCTION, FLOW], {"weight_sd": 60.0, "intercept": -20.0}, {}),
+        "flat": ([ADC, CURRENT], {"weight_sd": 1e-6, "intercept": 1e-6}, {"decision": DecisionRequest("1", "1", None)}),
+    }
+    models: dict[str, tuple[TrainedModel, SealedModel]] = {}
+    for seed, (kind, (quantities, trained, asked)) in enumerate(kinds.items()):
+        for arithmetic in ("int16", "int32"):
+            name = f"{kind}_{arithmetic}"
+            made = make_trained(quantities, 300 + seed, **trained)  # type: ignore[arg-type]
+            request = make_request(quantities, model=name, arithmetic=arithmetic, **asked)  # type: ignore[arg-type]
+            models[name] = made, seal_request(made, request, "Early warning of cavitation (invented numbers)")
+    return models
+
+
 def _limits(quantity: Quantity) -> tuple[float, float]:
     return float(Fraction(str(quantity.low))), float(Fraction(str(quantity.high)))
 

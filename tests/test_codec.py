@@ -235,7 +235,7 @@ SEALED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
         ("model", "arithmetic"),
         "binary16",
         True,
-        'model.arithmetic: found "binary16"; this version knows binary64, binary32',
+        'model.arithmetic: found "binary16"; this version knows binary64, binary32, int16, int32',
     ),
     "a number that is no binary32": (
         ("model", "intercepts", 0),

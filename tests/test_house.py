@@ -16,8 +16,8 @@ SOURCES = sorted(path for room in ROOMS for path in (ROOT / room).rglob("*.py"))
 DOORS = ("export/commands",)  # may call the trainer, inside functions
 
 # Modules that MicroPython has, as far as these two use them.
-BARE = {"runtime_min/arithmetic.py", "runtime_min/score.py", "runtime_min/logistic_constants.py"}
-BARE_MAY_IMPORT = {"struct", "math", "runtime_min.arithmetic", "runtime_min.score", "runtime_min.logistic_constants"}
+BARE = {f"runtime_min/{name}.py" for name in ("arithmetic", "score", "integer_score", "logistic_constants")}
+BARE_MAY_IMPORT = {"struct", "math", *(path.removesuffix(".py").replace("/", ".") for path in BARE)}
 
 
 def imports(path: Path) -> Iterator[tuple[str, str]]:
