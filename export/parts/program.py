@@ -41,6 +41,10 @@ class TroubleError(Exception):
     """A program that does not compile, does not end, or ends in a fault: one sentence."""
 
 
+class SpaceError(TroubleError):
+    """A program that is larger than the part's memory."""
+
+
 @contextmanager
 def folder_of(part: Part, sources: Mapping[str, bytes]) -> Iterator[Path]:
     """A folder with these files and those that every program of the part needs."""
@@ -53,20 +57,29 @@ def folder_of(part: Part, sources: Mapping[str, bytes]) -> Iterator[Path]:
 
 
 def compile_program(part: Part, folder: Path, flags: Sequence[str]) -> None:
-    """Compile every C file of the folder to one program. Raises TroubleError with the compiler's first words."""
+    """Compile every C file of the folder to one program.
+
+    Raises SpaceError where it does not fit, TroubleError with the compiler's first words where something else is wrong.
+    """
     sources = sorted(path.name for path in folder.iterdir() if path.suffix == ".c")
     done = _ran(part.chain.compile_command(part, flags, sources), folder, COMPILE_SECONDS, "the compiler")
     if done.returncode != 0:
-        telling = ("error", "warning", "overflowed")
-        lines = [line for line in done.stderr.splitlines() if any(word in line for word in telling)]
+        if " overflowed by " in done.stderr:
+            raise SpaceError(f"it does not fit into {part.rom} bytes of program memory and {part.ram} of data memory")
+        lines = [line for line in done.stderr.splitlines() if "error" in line or "warning" in line]
         raise TroubleError("it does not compile: " + (" | ".join(lines[:SHOWN_LINES]) or "no message"))
 
 
-def run_program(part: Part, folder: Path, seconds: float, *, counted: bool = False) -> list[str]:
-    """The lines that the program wrote, without the last one, "end". Raises TroubleError where that line is not there."""
+def run_program(part: Part, folder: Path, seconds: float, *, counted: bool = False, end: str | None = END) -> list[str]:
+    """The lines that the program wrote, without the last one, which is `end`.
+
+    Raises TroubleError where the last line is another.
+    """
     done = _ran(part.chain.emulate_command(part, counted), folder, seconds, "the program")
     lines = part.chain.written(done.stdout, done.stderr).splitlines()
-    if not lines or lines[-1] != END:
+    if end is None:
+        return lines
+    if not lines or lines[-1] != end:
         last = f', last "{_printable(lines[-1])}"' if lines else ""
         raise TroubleError(f"the program stopped early, after {len(lines)} lines{last}")
     return lines[:-1]

@@ -7,7 +7,16 @@ from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from export.parts import Part
-from export.parts.program import TYPES, TroubleError, compile_program, folder_of, program, row_bytes, run_program
+from export.parts.program import (
+    TYPES,
+    SpaceError,
+    TroubleError,
+    compile_program,
+    folder_of,
+    program,
+    row_bytes,
+    run_program,
+)
 from export.targets import Output, Run
 from export.targets.c.ways import STRICT
 from runtime_min.arithmetic import from_bits, raw_bits
@@ -15,10 +24,8 @@ from runtime_min.model import FLOATS, SealedModel
 
 # The dialect that the compiler takes where nothing is said: it may fuse products and sums.
 FLAGS = ("-std=gnu99", "-Os")
-MORE_FLAGS = (("-std=c99", "-O2"), ("-std=gnu99", "-O3", "-ffp-contract=fast"))
-CODE_BYTES = 16_000  # program memory that is left to code, and more an input; rows have the rest
-CODE_BYTES_AN_INPUT = 80
-MOST_ROW_BYTES = 32_000  # and no more than one array takes on the smallest parts
+MORE_FLAGS = (("-std=c99", "-O1"), ("-std=gnu99", "-O2", "-ffp-contract=fast"))
+MOST_ROW_BYTES = 32_000  # no more than one array takes on the smallest parts
 SECONDS = 60
 
 
@@ -49,24 +56,37 @@ def run_part(
 def _run_way(
     part: Part, header: bytes, sealed: SealedModel, rows: Sequence[Sequence[float]], flags: Sequence[str], what: str
 ) -> Run:
-    size = len(sealed.inputs) * TYPES[sealed.arithmetic].digits[0] // 2
-    room = part.rom - CODE_BYTES - CODE_BYTES_AN_INPUT * len(sealed.inputs)
-    batch = max(1, min(room, MOST_ROW_BYTES) // size)
-    outputs: list[Output] = []
     model_id, self_test = "", 0
-    for start in range(0, max(len(rows), 1), batch):
-        texts = [row_bytes(row, sealed.arithmetic) for row in rows[start : start + batch]]
-        source = program("rows.c.jinja", sealed, rows=texts, count=len(texts))
-        with folder_of(part, {"model.h": header, "rows.c": source}) as folder:
-            compile_program(part, folder, (*flags, *STRICT))
-            lines = run_program(part, folder, SECONDS)
-        head = re.fullmatch(r"([0-9a-zA-Z]{0,64}) (-?\d{1,5})", lines[0]) if lines else None
-        found = [_output(line, sealed.arithmetic) for line in lines[1:]]
-        if head is None or len(found) != len(texts):
-            raise TroubleError(f"expected {len(texts)} rows of output, found {len(found)}")
+    outputs: list[Output] = []
+    texts = [row_bytes(row, sealed.arithmetic) for row in rows]
+    batch = max(1, min(part.rom // 2, MOST_ROW_BYTES) // (len(sealed.inputs) * TYPES[sealed.arithmetic].digits[0] // 2))
+    while len(outputs) < len(rows):
+        some = texts[len(outputs) : len(outputs) + batch]
+        try:
+            head, found = _batch(part, header, sealed, some, flags)
+        except SpaceError:
+            if batch == 1:
+                raise
+            batch //= 2
+            continue
         model_id, self_test = head[1], self_test or int(head[2])
         outputs += found
     return Run(what, True, None, model_id, self_test, tuple(outputs))
+
+
+def _batch(
+    part: Part, header: bytes, sealed: SealedModel, texts: Sequence[str], flags: Sequence[str]
+) -> tuple[re.Match[str], list[Output]]:
+    """Model id and self-test, and the answers to a few rows."""
+    source = program("rows.c.jinja", sealed, rows=texts, count=len(texts))
+    with folder_of(part, {"model.h": header, "rows.c": source}) as folder:
+        compile_program(part, folder, (*flags, *STRICT))
+        lines = run_program(part, folder, SECONDS)
+    head = re.fullmatch(r"([0-9a-zA-Z]{0,64}) (-?\d{1,5})", lines[0]) if lines else None
+    found = [_output(line, sealed.arithmetic) for line in lines[1:]]
+    if head is None or len(found) != len(texts):
+        raise TroubleError(f"expected {len(texts)} rows of output, found {len(found)}")
+    return head, found
 
 
 def _output(line: str, arithmetic: str) -> Output:

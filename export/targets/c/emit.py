@@ -17,7 +17,7 @@ SMALLEST = {"binary32": 2.0**-149, "binary64": 2.0**-1074}
 def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     """The header `NAME.h`, ASCII.
 
-    Raises ReleaseError where two inputs would have the same name in C, or the model's name is none.
+    Raises ReleaseError where the model's name is none that C takes.
     """
     kind = sealed.arithmetic
     names = lexical.input_names(sealed)
@@ -50,15 +50,15 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
         subnormal=[names[term.of[0]] for term in sealed.terms if can_be_subnormal(sealed, term)],
         crc=f"0x{self_test.crc:08X}UL",
         tests=[vector_words(vector, kind) for vector in self_test.vectors],
-        answers=[(vector.expected.fault, vector.expected.decision) for vector in self_test.vectors],
     )
 
 
 def vector_words(vector: Vector, kind: str) -> list[str]:
-    """Inputs, log-odds and probability of one row as words of bits, in that order."""
+    """Inputs, log-odds and probability of one row as words of bits, then fault and decision, 16 bits each, in one."""
     parts = [lexical.words(value, kind) for value in vector.inputs]
     parts += [lexical.words_of_bits(bits, kind) for bits in (*vector.expected.log_odds, *vector.expected.probability)]
-    return [word for part in parts for word in part]
+    answers = vector.expected.fault | (vector.expected.decision & 0xFFFF) << 16
+    return [word for part in parts for word in part] + [f"0x{answers:08X}UL"]
 
 
 def can_be_subnormal(sealed: SealedModel, term: Term) -> bool:
