@@ -255,8 +255,11 @@ def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
     """The fit against its own optimality condition, recomputed from the file."""
     from export.check import Check
     from export.optimality import Source, recheck_fit
+    from trainer.sources import row_files
 
-    source = Source(plan.rows.file, plan.rows.label, plan.rows.held_out, plan.rows.seed)
+    rows = plan.rows
+    files = row_files(rows.file, plan.path.parent)
+    source = Source(files, rows.label, rows.held_out, rows.seed, rows.weight, rows.group)
     found = recheck_fit(trained, sealed.about.request, source)
     held = f"{found.rows:,} rows, within {found.step:.1e} posterior sd"
     sentence = "; ".join(found.problems) or held
