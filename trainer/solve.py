@@ -214,12 +214,9 @@ def _search(objective: Objective, theta: Array, step: Array, z: Array, along: Ar
 
 def _factor(hessian: Array) -> _Factor | None:
     """The factor, or None where rounding has eaten what one weight adds to the others."""
-    diagonal = np.diagonal(hessian)
-    if not (diagonal > 0.0).all() or not np.isfinite(diagonal).all():
-        return None
-    scaling = 1.0 / np.sqrt(diagonal)
+    scaling = 1.0 / np.sqrt(hessian.diagonal())  # NaN or infinite where there is no curvature: then `failed`
     lower, failed = lapack.dpotrf(hessian * scaling * scaling[:, np.newaxis], lower=1)
-    if failed or not float(np.diagonal(lower).min()) ** 2 > _LEAST_PIVOT:
+    if failed or not float(lower.diagonal().min()) ** 2 > _LEAST_PIVOT:
         return None
     return _Factor(lower, scaling)
 
