@@ -99,6 +99,11 @@ def _parser() -> argparse.ArgumentParser:
     )
     commands = parser.add_subparsers(title="commands", required=True, metavar="COMMAND")
 
+    draft = commands.add_parser("draft", help="write a commented plan from a data file, to look at and to ship")
+    draft.add_argument("rows", type=Path, help="a .csv, .npz or .parquet with a header")
+    draft.add_argument("--into", type=Path, metavar="PLAN", help="the plan (default: plan.toml beside the rows)")
+    draft.set_defaults(run=_draft)
+
     ship = commands.add_parser("ship", help="the whole job: fit, seal, write, run and check a release")
     ship.add_argument("plan", type=Path, help="the plan, a TOML file")
     ship.add_argument("--into", type=Path, metavar="FOLDER", help="the release (default: release/ beside the plan)")
@@ -133,6 +138,22 @@ def _check_options(parser: argparse.ArgumentParser) -> None:
         "--unchecked", action="append", default=[], metavar="ARTEFACT", help="accept python, c or onnx without a run"
     )
     parser.add_argument("--json", action="store_true", help="print the result for a program")
+
+
+def _draft(request: argparse.Namespace) -> int:
+    from export.folder import write_files
+    from trainer.draft import draft
+
+    place = request.into or request.rows.parent / "plan.toml"
+    if os.path.lexists(place):
+        raise ReleaseError(Problem(str(place), "is there already", "choose another --into, or remove it"))
+    with _progress() as progress:
+        progress("reading the rows")
+        made = draft(request.rows, place.parent)
+    write_files(place.parent, {place.name: made.text.encode()})
+    _print([*(f"{guess.taken_for:<10}{guess.column}: {guess.why}" for guess in made.guesses), ""])
+    _print([f"written   {place}: look at each guess, the ranges first; then: firmlogit ship {place}"])
+    return 0
 
 
 def _ship(request: argparse.Namespace) -> int:
