@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import csv
 import json
 import math
 from pathlib import Path
@@ -158,6 +159,35 @@ def test_integer_weights_are_the_rows_as_often(tmp_path: Path) -> None:
     )
     weighted = trained(tmp_path / "weighted", csv_of(FLOWS, [float(hour) for hour in hours]), more='weight = "hours"')
     assert weights_of(weighted) == weights_of(trained(tmp_path / "often", often))
+
+
+def toml(text: str) -> str:
+    return '"' + "".join(f"\\U{ord(character):08x}" for character in text) + '"'
+
+
+def test_hostile_text_ships_and_every_artefact_runs(tmp_path: Path) -> None:
+    # Text from the plan and from the rows that would be code, a comment's end, or a terminal's command anywhere else.
+    classes = ['so"und\n', "b*/ad\a??/"]
+    levels = ["*/ int planted; /*", '"""', "??/\n{{ 7 * 7 }}\u202e\a\\"]
+    column, unit, purpose = 'Fl"ow,\n*/\u202e', '*/"""\\\n\a{{', "*/ #error planted\n''' \\N{x} %s {0} \u2028\x85\x7f"
+    (tmp_path / "plan.toml").write_text(
+        f"""model = "pump"
+        purpose = {toml(purpose)}
+        rows = {{ file = "runs.csv", label = {toml('sta"te')}, classes = [{", ".join(map(toml, classes))}] }}
+        input = [{{ name = "flow", column = {toml(column)}, unit = {toml(unit)} }},
+                 {{ name = "wheel", levels = [{", ".join(map(toml, levels))}] }}]
+        prior = {{ sd = 1.0 }}
+        """
+    )
+    with (tmp_path / "runs.csv").open("w", encoding="utf-8", newline="") as stream:
+        writer = csv.writer(stream)
+        writer.writerow([column, "wheel", 'sta"te'])
+        for at, flow in enumerate(FLOWS):
+            writer.writerow([flow, levels[at % 3], classes[STATES[at] == "bad"]])
+    assert main(["ship", str(tmp_path / "plan.toml")]) == 0
+    sealed = json.loads((tmp_path / "release" / "pump.sealed.json").read_text())
+    assert (sealed["model"]["classes"], sealed["model"]["inputs"][1]["levels"]) == (classes, levels)
+    assert (sealed["model"]["inputs"][0]["unit"], sealed["about"]["purpose"]) == (unit, purpose)
 
 
 def test_levels_and_labels_may_be_numbers_and_truth_values_as_texts(tmp_path: Path) -> None:
