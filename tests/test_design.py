@@ -75,3 +75,36 @@ def test_every_missing_value_takes_the_typical_one_of_its_input() -> None:
     values = np.array([[1.0, NAN, 2], [NAN, 1, NAN]])
     assert with_typical(values, [7.5, 2.0, 0.25]).tolist() == [[1, 2, 2], [7.5, 1, 0.25]]
     assert math.isnan(values[0, 1])
+
+
+def test_typical_value_of_weighted_numbers_is_the_weighted_mean() -> None:
+    assert typical_value(np.array([1.0, NAN, 5.0]), 0, np.array([3.0, 100.0, 1.0])) == 2.0
+    assert typical_value(np.array([NAN, NAN]), 0, np.array([1.0, 2.0])) is None
+
+
+def test_typical_level_is_the_one_with_the_most_weight_of_several_the_lowest() -> None:
+    levels = np.array([2.0, 1, 1, NAN, 0])
+    assert typical_value(levels, 3, np.array([5.0, 2, 2, 100, 1])) == 2.0
+    assert typical_value(levels, 3, np.array([4.0, 2, 2, 100, 1])) == 1.0
+
+
+@given(
+    st.lists(st.tuples(st.floats(-1e300, 1e300), st.floats(5e-324, 1e300)), min_size=1, max_size=12),
+    st.randoms(use_true_random=False),
+)
+def test_weighted_mean_is_near_the_exact_one_and_the_same_in_any_order(
+    rows: list[tuple[float, float]], rng: random.Random
+) -> None:
+    found = typical_value(*_values_and_weights(rows))
+    exact = [(Fraction(value), Fraction(weight)) for value, weight in rows]
+    total = sum(weight for _, weight in exact)
+    mean = sum(value * weight for value, weight in exact) / total
+    size = sum(abs(value) * weight for value, weight in exact) / total
+    assert found is not None
+    # Each product, both sums and the quotient are rounded once; a product below 2^-1022 loses nothing beside 2^-974.
+    assert abs(Fraction(found) - mean) <= Fraction(5, 2**53) * size + Fraction(1, 2**974)
+    assert typical_value(*_values_and_weights(rng.sample(rows, len(rows)))) == found
+
+
+def _values_and_weights(rows: list[tuple[float, float]]) -> tuple[np.ndarray, int, np.ndarray]:
+    return np.array([value for value, _ in rows]), 0, np.array([weight for _, weight in rows])

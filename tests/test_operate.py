@@ -80,3 +80,47 @@ def test_far_log_odds_lose_nothing() -> None:
 @pytest.mark.parametrize("label", [0, 1])
 def test_one_class_has_no_area_under_the_curve(label: int) -> None:
     assert held_out_results(np.array([0.5, -1.0]), np.array([label, label]), 0.25).auc is None
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_weighted_results_agree_with_scikit_learn(seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    log_odds = np.round(rng.normal(0, 2, 300), 1)
+    labels = (rng.random(300) < 1 / (1 + np.exp(-log_odds))).astype(int)
+    weights = rng.uniform(0.01, 5.0, 300)
+    share = 1 / (1 + np.exp(-log_odds))
+    base = np.full(300, 0.3)
+    found = held_out_results(log_odds, labels, 0.3, weights)
+    assert (found.rows, found.events, found.base_rate) == (300, int(labels.sum()), 0.3)
+    assert found.log_loss == pytest.approx(log_loss(labels, share, sample_weight=weights), rel=1e-12)
+    assert found.brier == pytest.approx(brier_score_loss(labels, share, sample_weight=weights), rel=1e-12)
+    assert found.auc == pytest.approx(roc_auc_score(labels, share, sample_weight=weights), rel=1e-12)
+    assert found.base_log_loss == pytest.approx(log_loss(labels, base, sample_weight=weights), rel=1e-12)
+    assert found.base_brier == pytest.approx(brier_score_loss(labels, base, sample_weight=weights), rel=1e-12)
+
+
+def test_order_of_weighted_rows_changes_no_bit() -> None:
+    rng = np.random.default_rng(9)
+    log_odds, labels = np.round(rng.normal(0, 3, 500), 1), rng.integers(0, 2, 500)
+    weights = rng.uniform(1e-6, 1e6, 500)
+    first = held_out_results(log_odds, labels, 0.4, weights)
+    for _ in range(20):
+        order = rng.permutation(500)
+        assert held_out_results(log_odds[order], labels[order], 0.4, weights[order]) == first
+
+
+def test_row_weight_counts_as_so_many_rows() -> None:
+    rng = np.random.default_rng(2)
+    log_odds, labels, times = np.round(rng.normal(0, 2, 60), 1), rng.integers(0, 2, 60), rng.integers(1, 5, 60)
+    weighted = held_out_results(log_odds, labels, 0.4, times.astype(float))
+    repeated = held_out_results(np.repeat(log_odds, times), np.repeat(labels, times), 0.4)
+    assert weighted.auc == repeated.auc  # sums of whole numbers are exact
+    assert weighted.log_loss == pytest.approx(repeated.log_loss, rel=1e-15)
+    assert weighted.brier == pytest.approx(repeated.brier, rel=1e-15)
+    assert (weighted.rows, repeated.rows) == (60, int(times.sum()))
+
+
+def test_area_of_rows_in_perfect_order_is_one_for_any_weights() -> None:
+    weights = np.random.default_rng(1).uniform(1e-9, 1e9, 40)
+    assert area_under_roc(np.arange(40.0), (np.arange(40) >= 15).astype(int), weights) == pytest.approx(1.0, rel=1e-14)
+    assert area_under_roc(np.zeros(40), (np.arange(40) >= 15).astype(int), weights) == pytest.approx(0.5, rel=1e-14)
