@@ -58,6 +58,15 @@ def test_row_of_weight_zero_is_left_out_but_read(tmp_path: Path) -> None:
     assert problems_of(tmp_path, FILE + "x,open,bad,0,p4,0\n", rows=named)[0].startswith('line 7, column "flow": ')
 
 
+def test_rows_that_are_left_out_give_no_level_and_no_class(tmp_path: Path) -> None:
+    more = "7,ajar,sound,0,p1,0\n8,shut,worse,0,p1,0\n,half,worst,1,p1,0\n"
+    named = 'weight = "hours"\ngroup = "pump"\nheld_out = "test"'
+    rows = rows_of(tmp_path, FILE.replace("p1,0\n5", "p1,0\n6,bent,bad,0,p1,0\n5") + more, "", rows=named)
+    assert (rows.inputs[1].levels, rows.classes) == (("closed", "open"), ("bad", "sound"))
+    assert rows.values.tolist() == [[1, 0], [2, 1], [5, 0]]
+    assert rows.labels.tolist() == [1, 0, 0]
+
+
 def test_held_out_column_may_spell_its_numbers_in_any_way(tmp_path: Path) -> None:
     rows = rows_of(tmp_path, FILE.replace(",1\n", ",1.0\n").replace(",0\n", ",0e0\n"), rows=NAMED)
     assert rows.held_out is not None

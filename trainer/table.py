@@ -123,7 +123,7 @@ def _kept(plan: Plan, columns: Columns, total: int, sha256: str, where: str) -> 
         weights = weights[kept]
     values = values[kept]
     classes, labels = _labels(plan, columns, present, kept, where)
-    inputs = _completed(plan, inputs, values, where)
+    inputs = _completed(plan, _with_levels_seen(inputs, values), values, where)
     if problems := term_problems(str(plan.path), plan.prior, inputs):
         raise RowsError(problems)
     parsed = [_parsed(entry, column) for entry, column in zip(inputs, values.T, strict=True)]
@@ -171,24 +171,38 @@ def _labels(
     """(the class names, the class of each kept row). Classes that the plan does not name are sorted."""
     label = columns.label
     place = f"{where}: column {shown(label.header)}"
+    codes = label.joined().astype(np.int64)[kept]
     found_names = list(label.codes or ())
-    classes = plan.rows.classes or tuple(sorted(found_names))
-    if len(classes) > 2:
-        found = f"found {len(classes)} classes, {listed(classes)}: more than two are not there yet"
-        raise RowsError(Problem(place, found, "name two with classes, and remove the rows of the others"))
-    places = np.array([classes.index(name) for name in found_names], np.int64)
-    labels = places[label.joined().astype(np.int64)][kept]
+    seen = {found_names[code] for code in np.unique(codes)}
+    classes = plan.rows.classes or tuple(sorted(seen))
     if not present.any():
         found = f"found a value missing in each of {len(kept)} rows"
         raise RowsError(Problem(where, found, 'write missing = "typical" for the inputs that are often missing'))
-    missing = [name for index, name in enumerate(classes) if not np.any(labels == index)]
+    if len(classes) > 2:
+        found = f"found {len(classes)} classes, {listed(classes)}: more than two are not there yet"
+        raise RowsError(Problem(place, found, "name two with classes, and remove the rows of the others"))
+    missing = [name for name in classes if name not in seen]
     if len(classes) < 2:
         raise RowsError(Problem(place, f"found only the class {shown(classes[0])}", "give rows of two classes"))
     if missing:
         weighed = "" if columns.weight is None else " and have a weight above 0"
-        found = f"found no row of the class {listed(missing)} among the {len(labels)} that miss no value{weighed}"
+        found = f"found no row of the class {listed(missing)} among the {len(codes)} that miss no value{weighed}"
         raise RowsError(Problem(place, found, "give rows of both classes"))
-    return classes, labels
+    places = {name: index for index, name in enumerate(classes)}
+    return classes, np.array([places.get(name, -1) for name in found_names], np.int64)[codes]
+
+
+def _with_levels_seen(inputs: Sequence[InputPlan], values: Floats) -> tuple[InputPlan, ...]:
+    """The inputs with those levels alone, of the levels that rows gave, that kept rows have; `values` follow."""
+    changed = []
+    for position, entry in enumerate(inputs):
+        column = values[:, position]
+        seen, ranks = np.unique(column[~np.isnan(column)], return_inverse=True)
+        if entry.assumed and 0 < len(seen) < len(entry.levels):
+            entry = replace(entry, levels=tuple(entry.levels[int(index)] for index in seen))
+            column[~np.isnan(column)] = ranks
+        changed.append(entry)
+    return tuple(changed)
 
 
 def _completed(plan: Plan, inputs: Sequence[InputPlan], values: Floats, where: str) -> tuple[InputPlan, ...]:
