@@ -21,6 +21,11 @@ from export.attack import Attack, attack
 from export.budget import Budget, derive
 from export.contents import MANIFEST, MANIFEST_FORMAT, contents
 from export.diagnose import differences
+from export.parts import ALL, PARTS, Part
+from export.parts.board import BOARD, run_board
+from export.parts.measure import Measure, measure
+from export.parts.program import TroubleError
+from export.parts.run import run_part
 from export.targets import TARGETS, Run, Vector
 from export.vector_files import read_vectors
 from export.witness import witness_misses
@@ -45,7 +50,10 @@ class Check:
 
 @dataclass(frozen=True)
 class Report:
-    """All checks of one release. `accepted`: targets that may stand without having run."""
+    """All checks of one release. `accepted`: targets and parts that may stand without having run.
+
+    `measures`: what each function costs on the emulated parts that ran.
+    """
 
     model_id: str
     release: str | None
@@ -54,6 +62,7 @@ class Report:
     attack: Attack | None
     tolerance: Fraction | None
     accepted: tuple[str, ...]
+    measures: tuple[Measure, ...] = ()
 
     @property
     def ok(self) -> bool:
@@ -80,15 +89,17 @@ def check_release(
     *,
     thorough: bool = False,
     unchecked: Sequence[str] = (),
+    on: Sequence[str] = (),
     compare_text: bool = True,
     progress: Callable[[str], None] = lambda step: None,
 ) -> Report:
     """Check a release folder; it may be a copy, far from plan and rows.
 
-    thorough: every way of running each artefact and a longer attack. unchecked: targets that need not run.
+    thorough: every way of running each artefact and a longer attack. unchecked: targets and parts that need not run.
+    on: emulated parts, by name, that run the C header beside the one of the plan.
     compare_text: also write every file anew and compare bytes (off, only running can find a mistake).
 
-    Raises ReleaseError where the folder is no release.
+    Raises ReleaseError where the folder is no release, or a part is none.
     """
     into = Path(into)
     manifest = _read_manifest(into)
@@ -112,14 +123,55 @@ def check_release(
         artefact = into / TARGETS[name].file(sealed)
         for run in TARGETS[name].run(artefact, sealed, [vector.inputs for vector in vectors_on_file], thorough):
             checks.append(_compared(sealed, vectors_on_file, run, artefact.name, name))
+    measures: list[Measure] = []
+    for part in _parts(sealed, on):
+        progress(f"running {TARGETS['c'].file(sealed)} on {part.shown}")
+        found_there, costs = _on_part(part, into, sealed, vectors_on_file, thorough)
+        checks += found_there
+        measures += costs
     tolerance = sealed.about.request.tolerance
     return replace(
         report,
         checks=tuple(checks),
+        measures=tuple(measures),
         budget=budget,
         attack=found,
         tolerance=None if tolerance is None else Fraction(tolerance),
     )
+
+
+def _parts(sealed: SealedModel, on: Sequence[str]) -> list[Part]:
+    """The part of the plan and those of the request, each once; "all" are those that suit the arithmetic."""
+    asked = sealed.about.request.part
+    fitting = [name for name, part in PARTS.items() if sealed.arithmetic in part.arithmetics]
+    names = [*([asked] if asked else []), *(name for name in on if name != ALL), *(fitting if ALL in on else [])]
+    for name in names:
+        if name not in PARTS:
+            raise ReleaseError(Problem("part", f'found "{name}"', "name one of " + ", ".join(PARTS)))
+    return [PARTS[name] for name in dict.fromkeys(names)]
+
+
+def _on_part(
+    part: Part, into: Path, sealed: SealedModel, on_file: Sequence[Vector], thorough: bool
+) -> tuple[list[Check], tuple[Measure, ...]]:
+    """The header's vectors on an emulated part, the program for the real board there, and what each function costs."""
+    header = into / TARGETS["c"].file(sealed)
+    if not header.exists():
+        return [Check(header.name, part.shown, False, False, 0, 'there is none; add "c" to write', part.name)], ()
+    runs = list(run_part(part, header, sealed, [vector.inputs for vector in on_file], thorough))
+    checks = [_compared(sealed, on_file, run, header.name, part.name) for run in runs]
+    if not all(run.ran for run in runs):
+        return checks, ()
+    what = f"{part.shown}, emulated"
+    try:
+        checks.append(Check(BOARD, what, True, True, 0, run_board(part, into, sealed, on_file), part.name))
+    except TroubleError as trouble:
+        checks.append(Check(BOARD, what, True, False, 0, str(trouble), part.name))
+    within = [vector.inputs for vector in on_file if vector.expected.fault == 0]
+    try:
+        return checks, measure(part, header.read_bytes(), sealed, within)
+    except TroubleError as trouble:
+        return [*checks, Check(header.name, f"cost on {part.shown}", True, False, 0, str(trouble), part.name)], ()
 
 
 def _judged(artefact: str, what: str, count: int, found: str) -> Check:

@@ -10,7 +10,7 @@ import argparse
 import os
 import sys
 import traceback
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -135,7 +135,14 @@ def _parser() -> argparse.ArgumentParser:
 def _check_options(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--all", action="store_true", help="every compiler, dialect and option that is here")
     parser.add_argument(
-        "--unchecked", action="append", default=[], metavar="ARTEFACT", help="accept python, c or onnx without a run"
+        "--unchecked",
+        action="append",
+        default=[],
+        metavar="ARTEFACT",
+        help="accept python, c, onnx or a part without a run",
+    )
+    parser.add_argument(
+        "--on", action="append", default=[], metavar="PART", help="an emulated part that runs the C header too, or all"
     )
     parser.add_argument("--json", action="store_true", help="print the result for a program")
 
@@ -165,7 +172,7 @@ def _ship(request: argparse.Namespace) -> int:
 def _ship_into(request: argparse.Namespace, into: Path) -> int:
     from export.report import check_lines, fit_lines, model_line, report_json
 
-    unchecked = _unchecked(request)
+    unchecked, on = _unchecked(request), _on(request)
     with _progress() as progress:
         progress("reading the plan")
         plan, trained, sealed = _fitted(request.plan, progress)
@@ -182,6 +189,7 @@ def _ship_into(request: argparse.Namespace, into: Path) -> int:
             write=plan.write,
             thorough=request.all,
             unchecked=unchecked,
+            on=on,
             fit_checks=(_fit_check(plan, trained, sealed),),
             progress=progress,
         )
@@ -243,7 +251,7 @@ def _check(request: argparse.Namespace) -> int:
 
     with _progress() as progress:
         report = check_release(
-            request.release, thorough=request.all, unchecked=_unchecked(request), progress=progress
+            request.release, thorough=request.all, unchecked=_unchecked(request), on=_on(request), progress=progress
         )
     _print([report_json(report)] if request.json else [f"{'model':<12}{report.model_id}", *check_lines(report)])
     return 0 if report.ok else 1
@@ -289,12 +297,23 @@ def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
 
 
 def _unchecked(request: argparse.Namespace) -> tuple[str, ...]:
+    from export.parts import PARTS
     from export.targets import TARGETS
 
-    for name in request.unchecked:
-        if name not in TARGETS:
-            raise ReleaseError(Problem("--unchecked", f'found "{name}"', "name one of " + ", ".join(TARGETS)))
-    return tuple(request.unchecked)
+    return _named("--unchecked", request.unchecked, (*TARGETS, *PARTS))
+
+
+def _on(request: argparse.Namespace) -> tuple[str, ...]:
+    from export.parts import ALL, PARTS
+
+    return _named("--on", request.on, (*PARTS, ALL))
+
+
+def _named(option: str, names: Sequence[str], known: Sequence[str]) -> tuple[str, ...]:
+    for name in names:
+        if name not in known:
+            raise ReleaseError(Problem(option, f'found "{name}"', "name one of " + ", ".join(known)))
+    return tuple(names)
 
 
 def _print(lines: list[str]) -> None:

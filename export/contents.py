@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 from export.handoff import coefficients_csv, handoff_md
 from export.targets import TARGETS, Vector
-from export.targets.c.vectors_header import emit_vectors_header
+from export.targets.c.vectors_header import emit_board, emit_vectors_header
 from export.vector_files import vectors_csv, witness_csv
 from export.vectors import self_test_of
 from runtime_min.codec import sealed_text, trained_text
@@ -27,6 +27,7 @@ def artefacts(sealed: SealedModel, write: Sequence[str], vectors: Sequence[Vecto
         "HANDOFF.md": handoff_md(sealed, vectors, write),
         "vectors.csv": vectors_csv(sealed, vectors),
         "vectors.h": emit_vectors_header(sealed, vectors),
+        "board.c": emit_board(sealed, vectors),
     }
 
 

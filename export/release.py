@@ -6,13 +6,14 @@ import hashlib
 import json
 import platform
 from collections.abc import Callable, Sequence
-from dataclasses import replace
+from dataclasses import asdict, replace
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
 from export import check, folder
 from export.contents import MANIFEST, MANIFEST_FORMAT, artefacts, contents
+from export.parts.measure import Measure
 from export.targets import TARGETS
 from export.vectors import make_vectors
 from runtime_min.errors import Problem, ReleaseError
@@ -27,13 +28,15 @@ def write_release(
     write: Sequence[str] = tuple(TARGETS),
     thorough: bool = False,
     unchecked: Sequence[str] = (),
+    on: Sequence[str] = (),
     fit_checks: Sequence[check.Check] = (),
     progress: Callable[[str], None] = lambda step: None,
 ) -> check.Report:
     """Write every artefact, run it, and put the release in its place.
 
     sealed, trained: from `seal` and `fit_map`. into: the release folder. write: targets by name. thorough: run each
-    artefact in every way, not in a quick subset. unchecked: targets that may be released without having run.
+    artefact in every way, not in a quick subset. unchecked: targets and parts that may be released without having run.
+    on: emulated parts that run the C header, beside the one that the plan names.
     fit_checks: checks of the fit that were made beforehand, to stand in the same report.
 
     Returns the report; `report.ok` tells whether every check held and ran. A release in which an artefact could not be
@@ -51,11 +54,11 @@ def write_release(
         for name, data in files.items():
             (staging / name).write_bytes(data)
         _write_manifest(staging, sealed, files, write, ())
-        report = check.check_release(staging, thorough=thorough, unchecked=unchecked, progress=progress)
+        report = check.check_release(staging, thorough=thorough, unchecked=unchecked, on=on, progress=progress)
         report = replace(report, checks=(*fit_checks, *report.checks), release=str(into))
         if report.broken:
             return replace(report, release=None)
-        _write_manifest(staging, sealed, files, write, report.checks)
+        _write_manifest(staging, sealed, files, write, report.checks, report.measures)
         _refuse_foreign(into)  # it may have come while the checks ran
         folder.put_in_place(staging, into)
     return report
@@ -103,6 +106,7 @@ def _write_manifest(
     files: dict[str, bytes],
     write: Sequence[str],
     checks: Sequence[check.Check],
+    measures: Sequence[Measure] = (),
 ) -> None:
     manifest: dict[str, Any] = {
         "format": MANIFEST_FORMAT,
@@ -116,6 +120,7 @@ def _write_manifest(
         "checks": [
             {"artefact": entry.artefact, "what": entry.what, "ran": entry.ran, "ok": entry.ok} for entry in checks
         ],
+        "measures": [asdict(entry) for entry in measures],
     }
     (staging / MANIFEST).write_text(json.dumps(manifest, indent=1, sort_keys=True) + "\n", encoding="utf-8")
 

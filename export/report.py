@@ -5,9 +5,11 @@ from __future__ import annotations
 import json
 import math
 import textwrap
+from dataclasses import asdict
 from typing import Any
 
 from export.check import Check, Report
+from export.parts.board import BOARD
 from runtime_min.model import SealedModel, TrainedModel
 
 WIDTH = 80
@@ -66,6 +68,7 @@ def check_lines(report: Report) -> list[str]:
         where = " in all inputs there are" if report.attack.everything else ""
         lines.append(_line("", f"worst error found{where} {worst:.3g}, {share:.0%} of that bound"))
     lines += ["", *(_check_line(entry, report.accepted) for entry in report.checks), ""]
+    lines += _cost_lines(report)
     failed = [entry for entry in report.checks if entry.ran and not entry.ok]
     missing = [entry for entry in report.checks if not entry.ran and entry.target not in report.accepted]
     counts = [f"all {len(report.checks)} checks hold"] if report.ok else []
@@ -77,10 +80,24 @@ def check_lines(report: Report) -> list[str]:
     return [*lines, _line("release", f"{', '.join(counts)}: {where}")]
 
 
+def _cost_lines(report: Report) -> list[str]:
+    """A short table: what each function costs on each emulated part."""
+    if not report.measures:
+        return []
+    lines = [f"{'cost':<{_INDENT}}{'':<14}bytes   data  stack  at most"]
+    for before, entry in zip((None, *report.measures), report.measures, strict=False):
+        if before is None or before.part != entry.part:
+            lines.append(f"{'':<{_INDENT}}{entry.part}")
+        sizes = f"{entry.text:>6,}{entry.data:>7,}{entry.stack:>7,}"
+        lines.append(f"{'':<{_INDENT}}  {entry.function:<13}{sizes} {entry.most:>8,} {entry.counts}")
+    return [*lines, ""]
+
+
 def _check_line(entry: Check, accepted: tuple[str, ...]) -> str:
     mark = "ok" if entry.ok else "FAILED" if entry.ran else "unrun" if entry.target in accepted else "NOT RUN"
     label = entry.artefact.removesuffix(".json").rpartition(".")[2] if entry.artefact.endswith(".json") else None
-    label = label or (f".{entry.artefact.rpartition('.')[2]}" if entry.target else entry.artefact)
+    of_model = entry.target and entry.artefact != BOARD
+    label = label or (f".{entry.artefact.rpartition('.')[2]}" if of_model else entry.artefact)
     return _folded(f"{mark:<8}{label:<13}{entry.what}: {entry.found}", 21)
 
 
@@ -111,6 +128,7 @@ def report_json(report: Report) -> str:
                 for entry in report.checks
             ],
             "budget": _budget(report),
+            "parts": [asdict(entry) for entry in report.measures],
         },
         indent=1,
     )

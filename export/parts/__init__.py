@@ -16,6 +16,7 @@ from pathlib import Path
 from typing import Protocol, cast
 
 HERE = Path(__file__).parent
+ALL = "all"
 
 
 @dataclass(frozen=True)
@@ -93,7 +94,7 @@ class Family(Protocol):
         """Instructions or cycles, from what read_count() returned."""
 
 
-_ALL = ("binary64", "binary32", "int16", "int32")
+_EVERY = ("binary64", "binary32", "int16", "int32")
 _ARM = (
     Tool("arm-none-eabi-gcc", "gcc-arm-none-eabi"),
     Tool("arm-none-eabi-gcc", "libnewlib-arm-none-eabi", "libc_nano.a"),
@@ -106,15 +107,15 @@ PARTS = {
     part.name: part
     for part in (
         Part(
-            "cortex-m0", "Cortex-M0", "cortex_m", "instructions", _ALL, _ARM,
+            "cortex-m0", "Cortex-M0", "cortex_m", "instructions", _EVERY, _ARM,
             ("-mcpu=cortex-m0",), ("microbit",), rom=256 << 10, ram=16 << 10,
         ),
         Part(
-            "cortex-m3", "Cortex-M3", "cortex_m", "instructions", _ALL, _ARM,
+            "cortex-m3", "Cortex-M3", "cortex_m", "instructions", _EVERY, _ARM,
             ("-mcpu=cortex-m3",), ("mps2-an385",), **_MPS2,
         ),
         Part(
-            "cortex-m4f", "Cortex-M4F", "cortex_m", "instructions", _ALL, _ARM,
+            "cortex-m4f", "Cortex-M4F", "cortex_m", "instructions", _EVERY, _ARM,
             ("-mcpu=cortex-m4", "-mfpu=fpv4-sp-d16", "-mfloat-abi=hard"), ("mps2-an386",), **_MPS2,
         ),
         # double has 32 bits there, so that binary64 cannot run.

@@ -97,6 +97,4 @@ def _output(line: str, arithmetic: str) -> Output:
     z, p = int(match[2], 16), int(match[3], 16)
     if arithmetic in FLOATS:  # every NaN as the same one
         z, p = (raw_bits(from_bits(bits, arithmetic), arithmetic) for bits in (z, p))
-    else:
-        z -= (z >> 4 * log_odds - 1) << 4 * log_odds  # two's complement
     return Output(int(match[1]), (z,), (p,), int(match[4]))
