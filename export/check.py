@@ -227,7 +227,7 @@ def _same_model(
         other = str(error.problems[0])
     yield _judged(name, "sealed anew", int(bool(other)), other or "every number follows from the trained model")
     if compare_text:
-        made = vectors.make_vectors(sealed)
+        made = vectors.make_vectors(sealed, trained)
         files = contents(sealed, trained, manifest["write"], made)
         differing = [file for file, data in files.items() if not _holds(into / file, data)]
         found = f"{len(files)} files, byte for byte" if not differing else f"other bytes in {', '.join(differing)}"

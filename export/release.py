@@ -48,7 +48,7 @@ def write_release(
     _refuse_foreign(into)
     check.hold_tolerance(trained, sealed)
     progress("writing the artefacts")
-    vectors = make_vectors(sealed)
+    vectors = make_vectors(sealed, trained)
     files = contents(sealed, trained, write, vectors)
     with folder.building(into) as staging:
         for name, data in files.items():

@@ -1,8 +1,8 @@
 """Which inputs the artefacts are tried on, and the exact outputs expected of every one of them.
 
-The rows are invented, never rows of the data: random ones, corners of the ranges, rows next to and exactly on the
-threshold, and every kind of fault. They follow from the sealed model alone (the generator is seeded with its id), so
-that a check can make them again.
+The rows are invented: random ones, corners of the ranges, rows next to and exactly on the threshold, and every kind of
+fault. They follow from the sealed model alone (the generator is seeded with its id), so that a check can make them
+again. Only where the plan allows real rows, those of the witness come after them, rounded as the device rounds them.
 """
 
 from __future__ import annotations
@@ -16,9 +16,10 @@ from collections.abc import Iterator, Sequence
 import numpy as np
 
 from export.targets import Output, SelfTest, Vector
+from export.witness import witness_rows
 from runtime_min import arithmetic, score
 from runtime_min.integer_score import missing_count
-from runtime_min.model import INTEGERS, Input, SealedModel
+from runtime_min.model import INTEGERS, Input, SealedModel, TrainedModel
 from runtime_min.validity import device_numbers
 
 RANDOM_ROWS = 300
@@ -53,8 +54,8 @@ def table_crc(sealed: SealedModel) -> int:
     return binascii.crc32(data)
 
 
-def make_vectors(sealed: SealedModel) -> tuple[Vector, ...]:
-    """All vectors of a release, in a fixed order."""
+def make_vectors(sealed: SealedModel, trained: TrainedModel | None = None) -> tuple[Vector, ...]:
+    """All vectors of a release, in a fixed order; trained: its witness holds the real rows that the plan allows."""
     rng = random.Random(sealed.model_id)
     kinds: list[tuple[str, Iterator[Row]]] = [
         ("random", (random_row(sealed, rng) for _ in range(RANDOM_ROWS))),
@@ -62,6 +63,8 @@ def make_vectors(sealed: SealedModel) -> tuple[Vector, ...]:
         ("threshold", _next_to_threshold(sealed, rng)),
         ("policy", _policy_rows(sealed, rng)),
     ]
+    if trained is not None and sealed.about.request.real_rows:
+        kinds.append(("witness", witness_rows(trained, sealed)))
     return tuple(Vector(kind, row, expected(sealed, row)) for kind, rows in kinds for row in rows)
 
 

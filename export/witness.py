@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from fractions import Fraction
 from typing import NamedTuple
 
 from export.budget import Budget
 from export.exact import ZERO, delivered_value, slopes, unit
-from runtime_min.model import INTEGERS, Input, SealedModel, TrainedModel, in_range
+from runtime_min.model import INTEGERS, Input, SealedModel, TrainedModel, Witness, in_range
 from runtime_min.score import scores
 from runtime_min.sealing import round_to
 
@@ -35,12 +35,9 @@ def witness_misses(trained: TrainedModel, sealed: SealedModel, budget: Budget) -
     """
     rows, compared, largest = [], 0, 0.0
     for position, row in enumerate(trained.witness):
-        if not all(map(math.isfinite, row.inputs)):
+        if not (found := _delivered(sealed, row)):
             continue
-        exact = [delivered_value(entry, Fraction(v)) for entry, v in zip(sealed.inputs, row.inputs, strict=True)]
-        inputs = tuple(_carried(sealed, entry, number) for entry, number in zip(sealed.inputs, exact, strict=True))
-        if not all(map(math.isfinite, inputs)) or not in_range(sealed, inputs):
-            continue
+        exact, inputs = found
         compared += 1
         for k, (device, said, bound) in enumerate(zip(scores(sealed, inputs), row.log_odds, row.bounds, strict=True)):
             meant = Fraction(said) + _to_counts(trained, sealed, k, exact, inputs)
@@ -51,6 +48,22 @@ def witness_misses(trained: TrainedModel, sealed: SealedModel, budget: Budget) -
             if not difference <= allowed and position not in rows:
                 rows.append(position)
     return Misses(tuple(rows), compared, largest)
+
+
+def witness_rows(trained: TrainedModel, sealed: SealedModel) -> Iterator[tuple[float, ...]]:
+    """What the device has of each witness row that lies within its limits."""
+    for row in trained.witness:
+        if found := _delivered(sealed, row):
+            yield found[1]
+
+
+def _delivered(sealed: SealedModel, row: Witness) -> tuple[list[Fraction], tuple[float, ...]] | None:
+    """(what is delivered of a row, exactly; what the device has of it), or None where that is out of its limits."""
+    if not all(map(math.isfinite, row.inputs)):
+        return None
+    exact = [delivered_value(entry, Fraction(v)) for entry, v in zip(sealed.inputs, row.inputs, strict=True)]
+    inputs = tuple(_carried(sealed, entry, number) for entry, number in zip(sealed.inputs, exact, strict=True))
+    return (exact, inputs) if all(map(math.isfinite, inputs)) and in_range(sealed, inputs) else None
 
 
 def _carried(sealed: SealedModel, entry: Input, exact: Fraction) -> float:
