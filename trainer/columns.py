@@ -15,6 +15,7 @@ from trainer.plan import InputPlan, Plan
 from trainer.plan_checks import shown
 from trainer.plan_rows import named_columns
 
+_SUGGESTIONS = 20  # a search among thousands of headers takes a while
 _LEAVE_EMPTY = "leave the field empty where a value is missing"
 _NAME_ALL = "name every input with [[input]] in the plan"
 
@@ -126,7 +127,7 @@ def _measured(plan: Plan, entry: InputPlan, position: int) -> Column:
 def _position(name: str, header: list[str], place: str, what: str, problems: list[Problem]) -> int:
     if name in header:
         return header.index(name)
-    near = difflib.get_close_matches(name, header, n=1)
+    near = difflib.get_close_matches(name, header, n=1) if len(problems) < _SUGGESTIONS else []
     todo = f"write {shown(near[0])} in the plan if that is meant" if near else "name a column of the file in the plan"
     problems.append(Problem(place, f"found no column {shown(name)} for {what}", todo))
     return -1

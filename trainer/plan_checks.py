@@ -87,13 +87,16 @@ class Section:
             self.report(key, f"found {shown(value)}, not a list", todo)
             return ()
         before = len(self.problems)
-        for position, text in enumerate(value):
+        seen: set[str] = set()
+        for text in value:
             if not isinstance(text, str):
                 self.report(key, f"found {shown(text)}, not a text", "write it in quotes, as it stands in the file")
             elif not text.strip():
                 self.report(key, "found an empty text", "name it: an empty field is a missing value")
-            elif text in value[:position]:
+            elif text in seen:
                 self.report(key, f"found {shown(text)} twice", "name it once")
+            else:
+                seen.add(text)
         return tuple(value) if len(self.problems) == before else ()
 
     def choice(self, key: str, default: str, choices: Sequence[str]) -> str:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from fractions import Fraction
-from itertools import combinations
 
 from runtime_min.names import NAME_RULE, c_input_name, name_problem
 from trainer.plan_checks import Section, decimal_text, exact, range_problem, shown
@@ -168,17 +167,23 @@ def refuse_collisions(top: Section, inputs: tuple[InputPlan, ...], rows: RowsPla
         if entry.column and entry.column in taken:
             found = f"found {shown(entry.column)}, which is the {_MEANING[taken[entry.column]]}"
             top.report(f"[[input]] {shown(entry.name)}: column", found, "name a measured column")
-    for one, other in combinations(inputs, 2):
-        pair = f"[[input]] {shown(one.name)} and {shown(other.name)}"
-        if not one.name or not other.name:
+    names: set[str] = set()
+    spellings: dict[str, InputPlan] = {}
+    columns: dict[str, InputPlan] = {}
+    for entry in inputs:
+        if not entry.name:
             continue
-        if one.name == other.name:
-            top.report(f"[[input]] {shown(one.name)}", "found twice", "name each input once")
-        elif c_input_name(one.name, one.unit) == c_input_name(other.name, other.unit):
-            spelled = c_input_name(one.name, one.unit)
+        if entry.name in names:
+            top.report(f"[[input]] {shown(entry.name)}", "found twice", "name each input once")
+            continue
+        names.add(entry.name)
+        spelled = c_input_name(entry.name, entry.unit)
+        if (one := spellings.setdefault(spelled, entry)) is not entry:
+            pair = f"[[input]] {shown(one.name)} and {shown(entry.name)}"
             top.report(pair, f"found two inputs that C would call {spelled}", "rename one of them")
-        if one.name != other.name and one.column == other.column:
-            top.report(pair, f"found the column {shown(one.column)} in both", "give each input a column of its own")
+        if (one := columns.setdefault(entry.column, entry)) is not entry:
+            pair = f"[[input]] {shown(one.name)} and {shown(entry.name)}"
+            top.report(pair, f"found the column {shown(entry.column)} in both", "give each input a column of its own")
 
 
 _MEANING = {"label": "label", "weight": "weight", "held_out": "column of held-out rows"}

@@ -41,6 +41,7 @@ def term_problems(where: str, prior: PriorPlan, inputs: Iterable[InputPlan]) -> 
         if names:
             whole[entry.name] = f"name one of its levels, {listed(names[1:])}"
             whole[names[0]] = f"remove it: {shown(entry.levels[0])} is the reference level and has no weight"
+    known_names = set(known)
     return [
         Problem(
             f"{where}: [prior.term]: {shown(term.name)}",
@@ -48,7 +49,7 @@ def term_problems(where: str, prior: PriorPlan, inputs: Iterable[InputPlan]) -> 
             whole.get(term.name, f"name one of the terms, {listed(known)}"),
         )
         for term in prior.terms
-        if term.name not in known
+        if term.name not in known_names
     ]
 
 
