@@ -11,7 +11,7 @@ import re
 from functools import lru_cache
 from pathlib import Path
 
-from jinja2 import Environment, StrictUndefined
+from jinja2 import Environment, StrictUndefined, Template
 
 from export.targets.c import lexical
 from runtime_min.model import SealedModel
@@ -28,8 +28,7 @@ def fill(parts: tuple[str, ...], sealed: SealedModel, **context: object) -> byte
     text = re.sub(r"\bname_", f"{name}_", text)
     text = re.sub(r"\breal\b", lexical.REAL[arithmetic], text)
     text = re.sub(r"(?<=\d)r\b", lexical.SUFFIX[arithmetic], text)
-    template = _environment().from_string(text)
-    filled = template.render(
+    filled = _template(text).render(
         model=sealed,
         name=name,
         double=arithmetic == "binary64",
@@ -40,12 +39,12 @@ def fill(parts: tuple[str, ...], sealed: SealedModel, **context: object) -> byte
     return filled.encode("ascii")
 
 
-@lru_cache(maxsize=1)
-def _environment() -> Environment:
+@lru_cache(maxsize=16)
+def _template(text: str) -> Template:
     environment = Environment(
         undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True, autoescape=False
     )
     environment.filters["comment"] = lexical.comment
     environment.filters["comment_lines"] = lexical.comment_lines
     environment.filters["wrapped"] = lexical.wrapped
-    return environment
+    return environment.from_string(text)

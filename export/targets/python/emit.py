@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from fractions import Fraction
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
-from jinja2 import Environment, StrictUndefined
+from jinja2 import Environment, StrictUndefined, Template
 
 from export.targets import (
     SELF_TEST_ROUNDING,
@@ -37,13 +38,12 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     if sealed.arithmetic == "binary32" and not _largest_sum(sealed) <= BINARY32_SAFE:
         found = "a step of the log-odds can be too large for binary32 within the ranges"
         raise ReleaseError(Problem(f"{sealed.name}.py", found, "narrow the ranges, or choose binary64"))
-    text = _environment().from_string(TEMPLATE.read_text(encoding="utf-8")).render(
-        sealed=sealed, self_test=self_test, codes=CODES, **_parts(sealed)
-    )
+    text = _template().render(sealed=sealed, self_test=self_test, codes=CODES, **_parts(sealed))
     return text.encode("ascii")
 
 
-def _environment() -> Environment:
+@lru_cache(maxsize=1)
+def _template() -> Template:
     environment = Environment(
         undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True, autoescape=False
     )
@@ -51,7 +51,7 @@ def _environment() -> Environment:
         environment.filters[rule.__name__] = rule
     environment.filters["listed"] = lexical.listed
     environment.globals.update(constant=lexical.constant, local=lexical.local)
-    return environment
+    return environment.from_string(TEMPLATE.read_text(encoding="utf-8"))
 
 
 def _parts(sealed: SealedModel) -> dict[str, Any]:
