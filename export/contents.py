@@ -16,15 +16,17 @@ MANIFEST = "manifest.json"
 MANIFEST_FORMAT = "firmlogit release 1"
 
 
-def artefacts(sealed: SealedModel, write: Sequence[str], vectors: Sequence[Vector]) -> dict[str, bytes]:
-    """Every file that follows from the sealed model alone."""
+def artefacts(
+    sealed: SealedModel, write: Sequence[str], vectors: Sequence[Vector], prevalence: str | None = None
+) -> dict[str, bytes]:
+    """Every file that follows from the sealed model alone; HANDOFF.md says the prevalence where one is given."""
     self_test = self_test_of(sealed, vectors)
     files = {TARGETS[name].file(sealed): TARGETS[name].emit(sealed, self_test) for name in write}
     return {
         **files,
         f"{sealed.name}.sealed.json": sealed_text(sealed).encode(),
         "coefficients.csv": coefficients_csv(sealed),
-        "HANDOFF.md": handoff_md(sealed, vectors, write),
+        "HANDOFF.md": handoff_md(sealed, vectors, write, prevalence),
         "vectors.csv": vectors_csv(sealed, vectors),
         "vectors.h": emit_vectors_header(sealed, vectors),
         "board.c": emit_board(sealed, vectors),
@@ -36,7 +38,7 @@ def contents(
 ) -> dict[str, bytes]:
     """Every file of a release but its manifest."""
     return {
-        **artefacts(sealed, write, vectors),
+        **artefacts(sealed, write, vectors, trained.prevalence),
         f"{sealed.name}.trained.json": trained_text(trained).encode(),
         "witness.csv": witness_csv(trained),
     }

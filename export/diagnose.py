@@ -12,12 +12,15 @@ from collections.abc import Sequence
 import numpy as np
 
 from export.targets import Output, Vector
-from export.vector_files import hex_bits
+from export.vector_files import forms_of
 from runtime_min import arithmetic, score
-from runtime_min.model import SealedModel
+from runtime_min.model import INTEGERS, SealedModel
 
 # A log-odds difference of so few units in the last place, on a part of the rows, is rounding and not a wrong number.
 ROUNDING_ULPS = 4
+
+# What 16-bit integers lose when they wrap; wider ones lose multiples of it.
+WRAPPED = 2**16
 
 
 def differences(sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Output]) -> tuple[int, str]:
@@ -50,8 +53,9 @@ def _shown(output: Output, part: str, sealed: SealedModel) -> str:
     value = getattr(output, part)
     if isinstance(value, int):
         return str(value)
-    bits = value[0]
-    return f"{arithmetic.from_bits(bits, sealed.arithmetic)!r} ({hex_bits(bits, sealed.arithmetic)})"
+    number = arithmetic.from_bits(value[0], sealed.arithmetic)
+    form = getattr(forms_of(sealed), part)
+    return f"{number!r} ({form.bits(number)})"
 
 
 def _cause(
@@ -69,7 +73,8 @@ def _cause(
         where = "only rows exactly on the threshold: look at the comparison" if on else "look at the thresholds"
         return f"log-odds and probability agree; {where}"
     if "log_odds" not in parts:
-        return "log-odds agree; look at the exponential and the logistic function"
+        looked_at = "the table and its interpolation" if sealed.table else "the exponential and the logistic function"
+        return f"log-odds agree; look at {looked_at}"
     return _log_odds_cause(sealed, vectors, outputs)
 
 
@@ -102,9 +107,9 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
             return "the artefact's log-odds are not finite"
         rows.append(_columns(sealed, values))
         deltas.append(delta)
-        ulps.append(abs(delta) / float(np.spacing(_typed(sealed, _largest_partial_sum(sealed, rows[-1])))))
+        ulps.append(abs(delta) / _last_place(sealed, rows[-1]))
     names = _column_names(sealed)
-    table, target = np.array(rows), np.array(deltas)
+    table, target = np.array(rows), np.array(deltas, np.float64)
     sizes = np.maximum(np.abs(table).max(axis=0), 1e-300)
     solution = np.linalg.lstsq(table / sizes, target, rcond=1e-10)[0]
     effects = np.abs(solution)
@@ -114,6 +119,8 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
         order = [int(at) for at in np.argsort(-effects) if effects[at] > 0.02 * effects.max()]
         named = [names[at] for at in order[:3]]
         return "the differences follow " + " and ".join(named)
+    if sealed.arithmetic in INTEGERS:
+        return _integer_cause([int(delta) for delta in deltas], len(sealed.terms))
     if max(ulps) <= ROUNDING_ULPS * len(sealed.terms):
         return (
             f"differences of at most {max(ulps):.0f} in the last place of the largest sum: a last digit of a number is "
@@ -122,8 +129,21 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
     return "no single number explains the differences: look at the order of the terms and at how inputs are prepared"
 
 
-def _typed(sealed: SealedModel, value: float) -> np.floating:
-    return np.float32(value) if sealed.arithmetic == "binary32" else np.float64(value)
+def _integer_cause(deltas: Sequence[int], terms: int) -> str:
+    """Of differences that follow no number: wrapped integers are off by multiples of a high power of two."""
+    if math.gcd(*deltas) % WRAPPED == 0:
+        return f"all differences are multiples of {WRAPPED}: an integer overflows (look at the widths of the products)"
+    if max(map(abs, deltas)) <= terms:
+        return f"differences of at most {max(map(abs, deltas))} units: a shift rounds where nothing is to be rounded"
+    return "no single number explains the differences: look at the shifts, the signs, and how inputs are prepared"
+
+
+def _last_place(sealed: SealedModel, columns: Sequence[float]) -> float:
+    """A unit in the last place of the largest sum; in integers the accumulator's."""
+    if sealed.arithmetic in INTEGERS:
+        return 1.0
+    largest = _largest_partial_sum(sealed, columns)
+    return float(np.spacing(np.float32(largest) if sealed.arithmetic == "binary32" else np.float64(largest)))
 
 
 def _columns(sealed: SealedModel, values: Sequence[float]) -> list[float]:

@@ -10,19 +10,64 @@ import csv
 import io
 import math
 from collections.abc import Sequence
+from dataclasses import dataclass
 from pathlib import Path
 
 from export.targets import Output, Vector
 from runtime_min import arithmetic
 from runtime_min.errors import FileError, Problem
-from runtime_min.model import SealedModel, TrainedModel
+from runtime_min.integer_score import count_bits
+from runtime_min.model import INTEGERS, SealedModel, TrainedModel
 
 _RESULTS = ("fault", "log_odds", "log_odds_bits", "probability", "probability_bits", "decision")
 
 
-def hex_bits(bits: int, kind: str) -> str:
-    """Raw bits as 8 (binary32) or 16 (binary64) hexadecimal digits."""
-    return f"{bits:0{8 if kind == 'binary32' else 16}X}"
+@dataclass(frozen=True)
+class Form:
+    """How a number is written: one of a floating-point `kind`, or (kind "") an integer, signed or not, of `width` bits.
+
+    Bits are `width` / 4 hexadecimal digits, most significant first; a signed integer is in two's complement.
+    """
+
+    kind: str
+    width: int
+    signed: bool = True
+
+    def decimal(self, value: float) -> str:
+        """The number in decimal."""
+        return decimal_text(value, self.kind) if self.kind else str(int(value))
+
+    def bits(self, value: float) -> str:
+        """The number's bits."""
+        raw = arithmetic.raw_bits(value, self.kind) if self.kind else int(value) & ((1 << self.width) - 1)
+        return f"{raw:0{self.width // 4}X}"
+
+    def read(self, bits: str) -> float:
+        """The number of these bits. Raises ValueError where they are no number of this width."""
+        if len(bits) != self.width // 4:
+            raise ValueError(f"found {bits}, expected {self.width // 4} hexadecimal digits")
+        raw = int(bits, 16)
+        if self.kind:
+            return arithmetic.from_bits(raw, self.kind)
+        return raw - (1 << self.width) if self.signed and raw >> (self.width - 1) else raw
+
+
+@dataclass(frozen=True)
+class Forms:
+    """How a model's inputs, log-odds and probabilities are written."""
+
+    inputs: Form
+    log_odds: Form
+    probability: Form
+
+
+def forms_of(sealed: SealedModel) -> Forms:
+    """Floats; or counts, the accumulator and 16 bits without a sign."""
+    if sealed.arithmetic in INTEGERS:
+        accumulator = Form("", arithmetic.ACCUMULATOR_BITS[sealed.arithmetic])
+        return Forms(Form("", count_bits(sealed)), accumulator, Form("", 16, signed=False))
+    floats = Form(sealed.arithmetic, 32 if sealed.arithmetic == "binary32" else 64)
+    return Forms(floats, floats, floats)
 
 
 def decimal_text(value: float, kind: str) -> str:
@@ -47,17 +92,21 @@ def _plain(text: str) -> str:
 
 def vectors_csv(sealed: SealedModel, vectors: Sequence[Vector]) -> bytes:
     """The text of vectors.csv."""
-    kind = sealed.arithmetic
+    forms = forms_of(sealed)
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
     writer.writerow(_header(sealed))
     for vector in vectors:
         row: list[str | int] = [vector.kind]
         for value in vector.inputs:
-            row += [decimal_text(value, kind), hex_bits(arithmetic.raw_bits(value, kind), kind)]
+            row += [forms.inputs.decimal(value), forms.inputs.bits(value)]
         row.append(vector.expected.fault)
-        for bits in (vector.expected.log_odds[0], vector.expected.probability[0]):
-            row += [decimal_text(arithmetic.from_bits(bits, kind), kind), hex_bits(bits, kind)]
+        for form, bits in (
+            (forms.log_odds, vector.expected.log_odds[0]),
+            (forms.probability, vector.expected.probability[0]),
+        ):
+            value = arithmetic.from_bits(bits, sealed.arithmetic)
+            row += [form.decimal(value), form.bits(value)]
         writer.writerow([*row, vector.expected.decision])
     return out.getvalue().encode()
 
@@ -84,7 +133,7 @@ def read_vectors(sealed: SealedModel, path: Path) -> tuple[Vector, ...]:
             problems.append(Problem(where, f"found {len(row)} fields", f"expected {len(header)}"))
             continue
         try:
-            vectors.append(_vector(sealed.arithmetic, row, len(sealed.inputs)))
+            vectors.append(_vector(sealed, row))
         except ValueError as error:
             problems.append(Problem(where, str(error), "take the file from the release again"))
     if problems:
@@ -92,18 +141,20 @@ def read_vectors(sealed: SealedModel, path: Path) -> tuple[Vector, ...]:
     return tuple(vectors)
 
 
-def _vector(kind: str, row: list[str], width: int) -> Vector:
-    def number(at: int) -> int:
-        bits = int(row[at + 1], 16)
-        written = row[at]
-        if decimal_text(arithmetic.from_bits(bits, kind), kind) != written:
-            raise ValueError(f"the decimal {written} and the bits {row[at + 1]} are two different numbers")
-        return bits
+def _vector(sealed: SealedModel, row: list[str]) -> Vector:
+    forms, width = forms_of(sealed), len(sealed.inputs)
 
-    inputs = tuple(arithmetic.from_bits(number(1 + 2 * position), kind) for position in range(width))
+    def number(form: Form, at: int) -> float:
+        value = form.read(row[at + 1])
+        if (form.decimal(value), form.bits(value)) != (row[at], row[at + 1]):
+            raise ValueError(f"the decimal {row[at]} and the bits {row[at + 1]} are two different numbers")
+        return value
+
+    inputs = tuple(number(forms.inputs, 1 + 2 * position) for position in range(width))
     at = 1 + 2 * width
-    output = Output(int(row[at]), (number(at + 1),), (number(at + 3),), int(row[at + 5]))
-    return Vector(row[0], inputs, output)
+    results = number(forms.log_odds, at + 1), number(forms.probability, at + 3)
+    log_odds, probability = ((arithmetic.raw_bits(value, sealed.arithmetic),) for value in results)
+    return Vector(row[0], inputs, Output(int(row[at]), log_odds, probability, int(row[at + 5])))
 
 
 def witness_csv(trained: TrainedModel) -> bytes:
