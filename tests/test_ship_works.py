@@ -8,7 +8,9 @@ import math
 from pathlib import Path
 
 import numpy as np
+import pyarrow
 import pytest
+from pyarrow import parquet
 
 from export.commands import main
 
@@ -188,6 +190,47 @@ def test_hostile_text_ships_and_every_artefact_runs(tmp_path: Path) -> None:
     sealed = json.loads((tmp_path / "release" / "pump.sealed.json").read_text())
     assert (sealed["model"]["classes"], sealed["model"]["inputs"][1]["levels"]) == (classes, levels)
     assert (sealed["model"]["inputs"][0]["unit"], sealed["about"]["purpose"]) == (unit, purpose)
+
+
+LEAST = """
+model = "pump"
+[rows]
+file = "FILE"
+label = "state"
+"""
+
+
+def test_plan_of_model_file_and_label_ships(tmp_path: Path) -> None:
+    (tmp_path / "plan.toml").write_text(LEAST.replace("FILE", "runs.csv"))
+    (tmp_path / "runs.csv").write_text(csv_of(FLOWS).replace("flow,", "Flow [m³/h],"), encoding="utf-8")
+    assert main(["ship", str(tmp_path / "plan.toml")]) == 0
+    model = json.loads((tmp_path / "release" / "pump.trained.json").read_text())["trained"]
+    assert [(entry["name"], entry["unit"], entry["levels"]) for entry in model["inputs"]] == [
+        ("flow", "m³/h", []),
+        ("wheel", "", ["closed", "open"]),
+    ]
+    assert model["classes"] == ["bad", "sound"]
+    assert model["choice"]["method"] == "cross-validation"
+    assert model["rows"]["held_out"] == round(N / 4)
+    request = json.loads((tmp_path / "release" / "pump.sealed.json").read_text())["about"]["request"]
+    assert [entry["assumed"] for entry in request["inputs"]] == [True, True]
+
+
+def test_same_rows_in_any_file_are_the_same_model(tmp_path: Path) -> None:
+    hours = [0.5 + at % 4 for at in range(N)]
+    columns = {"flow": FLOWS, "wheel": WHEELS, "state": STATES, "hours": hours}
+    header, *lines = csv_of(FLOWS, hours).splitlines(keepends=True)
+    (tmp_path / "runs.csv").write_text(header + "".join(lines))
+    (tmp_path / "a log.csv").write_text(header + "".join(lines[20:]))
+    (tmp_path / "b log.csv").write_text(header + "".join(lines[:20]))
+    np.savez(tmp_path / "runs.npz", **{name: np.array(column) for name, column in columns.items()})
+    parquet.write_table(pyarrow.table(columns), tmp_path / "runs.parquet")
+    sealed = []
+    for file in ("runs.csv", "runs.npz", "runs.parquet", "*log.csv"):
+        (tmp_path / "plan.toml").write_text(LEAST.replace("FILE", file) + 'weight = "hours"\n')
+        assert main(["fit", str(tmp_path / "plan.toml")]) == 0
+        sealed.append(json.loads((tmp_path / "pump.sealed.json").read_text())["model"])
+    assert sealed == [sealed[0]] * 4
 
 
 def test_levels_and_labels_may_be_numbers_and_truth_values_as_texts(tmp_path: Path) -> None:
