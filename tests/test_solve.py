@@ -267,8 +267,8 @@ def test_residual_and_curvature_keep_all_digits(weight: float) -> None:
 
 
 def test_gradient_in_pairs_holds_where_double_sums_cancel() -> None:
-    """Near-duplicate columns and weights of 1e12: against mpmath at 50 digits, relative to the sum of term sizes; what
-    remains is the rounding of each row's exponential."""
+    """Near-duplicate columns and weights of 1e12: against mpmath at 50 digits, relative to the sum of term sizes, which
+    is what is returned rounded to one double."""
     values, labels, _, prior = HARD_CASES["correlation 1 - 1e-10"]
     weights = 10.0 ** np.random.default_rng(1).integers(0, 13, size=60)
     columns = standardise(values, weights, [True] * 4).columns
@@ -283,7 +283,7 @@ def test_gradient_in_pairs_holds_where_double_sums_cancel() -> None:
                 p = 1 / (1 + mpmath.exp(-mpmath.fdot(full, map(float, theta))))
                 exact += mpmath.mpf(float(weight)) * (p - label) * full[place]
             size = checked_gradient(objective, theta).sizes[place]
-            assert abs(found[place] - exact) <= 4 * 2.0**-53 * size
+            assert abs(found[place] - exact) <= 2.0**-53 * abs(exact) + 1e-27 * size
 
 
 def test_separated_classes_under_a_flat_prior_are_refused() -> None:
@@ -316,3 +316,30 @@ def test_many_rows_give_the_weights_that_newton_alone_gives(case: str, monkeypat
     monkeypatch.setattr(module, "sample_size", lambda _: 0)
     alone = solve(columns, labels, row_weights, prior)
     assert (found.intercept, found.weights) == (alone.intercept, alone.weights)
+
+
+@pytest.mark.parametrize("case", ["plain", "correlation 1 - 1e-10, weak prior"])
+@pytest.mark.parametrize("beside", [-1e-13, -2e-15, 2e-15, 1e-13])
+def test_weight_beside_a_midpoint_goes_to_its_side(case: str, beside: float) -> None:
+    """A prior mean moves the optimum of one weight to 1e-13 or 2e-15 beside a midpoint of the grid; every order of the
+    rows gives the neighbour on that side. Where the optimum is: mpmath at 50 digits."""
+    values, labels, _, prior = HARD_CASES[case]
+    width = values.shape[1]
+    columns = standardise(values, None, [True] * width).columns
+    mean = 0.0
+    with mpmath.workdps(50):
+        for _ in range(4):
+            moved = Prior((0.0,) * (width - 1) + (mean,), prior.sds)
+            solution = solve(columns, labels, None, moved)
+            optimum = mpmath_optimum(columns, labels, None, moved, solution)[-1]
+            middle = (mpmath.floor(optimum / WEIGHT_STEP) + 0.5) * WEIGHT_STEP
+            off = float(middle + beside - optimum)
+            if abs(off) <= abs(beside) / 4:
+                break
+            mean += off * prior.sds[-1] ** 2 / solution.covariance[-1][-1]
+        assert abs(off) <= abs(beside) / 4
+        expected = float(middle + mpmath.sign(beside) * HALF_STEP)
+    assert solution.weights[-1] == expected
+    for seed in range(10):
+        order = np.random.default_rng(seed).permutation(len(labels))
+        assert solve(columns[order], labels[order], None, moved).weights == solution.weights

@@ -9,12 +9,13 @@ import mpmath
 import numpy as np
 import pytest
 from check_sets import TWO_CLASS_SETS, check_set
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
 from trainer import standardise as module
 from trainer.exact_sums import Pairs, pair_sum, tree_additions, tree_sum, two_product, two_sum
+from trainer.pair_logistic import logistic_pairs
 from trainer.standardise import class_sums, standardise
 
 
@@ -59,7 +60,8 @@ def test_centres_and_scales_are_exact_arithmetic_rounded_once(offset: float, spr
         assert (found.centres[column], found.scales[column]) == expected
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=200, deadline=None)
+@example(np.array([0.0, 5e-324, 0.0]), [1.0] * 12, False)
 @given(
     arrays(np.float64, st.integers(2, 12), elements=st.floats(-1e100, 1e100)),
     st.lists(st.floats(1e-200, 1e200), min_size=12, max_size=12),
@@ -71,8 +73,12 @@ def test_any_column_is_exact_arithmetic_rounded_once(values: np.ndarray, weights
     if (values == values[0]).all():
         assert (found.centres, found.scales) == ((values[0] + 0.0,), (1.0,))
         assert not found.columns.any()
+        return
+    centre, scale = exact_centre_and_scale(values, row_weights)
+    if scale == 0.0:  # subnormal numbers only
+        assert found.scales == (1.0,)
     else:
-        assert (found.centres[0], found.scales[0]) == exact_centre_and_scale(values, row_weights)
+        assert (found.centres[0], found.scales[0]) == (centre, scale)
 
 
 def test_centre_on_a_midpoint_goes_to_the_even_multiple() -> None:
@@ -154,3 +160,15 @@ def test_pairs_lose_nothing() -> None:
     expected = sum(Fraction(float(x)) + Fraction(float(y)) * Fraction(1, 2**60) for x, y in zip(a, b, strict=True))
     error = abs(Fraction(float(total.high)) + Fraction(float(total.low)) - expected)
     assert error <= Fraction(1, 2**99) * Fraction(float(np.abs(a).sum()))
+
+
+def test_logistic_in_pairs_has_28_digits() -> None:
+    """Against mpmath at 60 digits, over the whole range and with a low part."""
+    draws = np.random.default_rng(8)
+    high = np.concatenate((draws.normal(size=400) * 20.0, draws.uniform(-599.0, 599.0, 200), (0.0, 1e-300, -1e-9)))
+    low = high * 2.0**-54 * draws.uniform(-1.0, 1.0, len(high))
+    found = logistic_pairs(Pairs(high, low))
+    with mpmath.workdps(60):
+        for t_high, t_low, ours_high, ours_low in zip(high, low, *found, strict=True):
+            exact = 1 / (1 + mpmath.exp(-(mpmath.mpf(t_high) + mpmath.mpf(t_low))))
+            assert abs(mpmath.mpf(ours_high) + mpmath.mpf(ours_low) - exact) <= mpmath.mpf("1e-28") * exact

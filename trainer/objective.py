@@ -17,7 +17,8 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from trainer.exact_sums import Pairs, add_pairs, pair_sum, scale_pairs, two_product
+from trainer.exact_sums import Pairs, add_pairs, pair_sum, scale_pairs, two_product, two_sum
+from trainer.pair_logistic import logistic_pairs
 
 Array = NDArray[np.float64]
 
@@ -53,7 +54,7 @@ def objective_of(columns: Array, labels: NDArray[np.integer], row_weights: Array
         columns, sides, row_weights = columns[used], sides[used], row_weights[used]
     means = np.array((0.0, *prior.means))
     sds = np.array((prior.intercept_sd, *prior.sds))
-    return Objective(columns, sides, row_weights, means, sds**-2.0)
+    return Objective(columns, sides, row_weights, means, 1.0 / (sds * sds))
 
 
 def log_odds(columns: Array, theta: Array) -> Array:
@@ -161,22 +162,21 @@ def gradient_along(objective: Objective, theta: Array, directions: Array, *, blo
 
 
 def gradient_in_pairs(objective: Objective, theta: Array) -> Array:
-    """Gradient at θ with log-odds and sums in pairs of doubles, (d + 1,): the order of the rows does not show.
-
-    expit at high + low is expit(high) + low · expit'(high); the next term is below 1e-30.
-    """
+    """Gradient at θ with log-odds, logistic and sums in pairs of doubles, (d + 1,): what is rounded away does not show
+    in 25 digits, in any order of the rows, on any machine."""
     columns, sides, row_weights, means, precisions = objective
     zero = np.zeros(len(theta))
     total = Pairs(zero, zero)
     for start in range(0, len(columns), _PAIR_BLOCK_ROWS):
         rows = slice(start, start + _PAIR_BLOCK_ROWS)
-        block = np.vstack((np.ones(len(sides[rows])), columns[rows].T))  # (d + 1, rows)
+        side = sides[rows]
+        block = np.vstack((np.ones(len(side)), columns[rows].T))  # (d + 1, rows)
         z = pair_sum(two_product(block, np.broadcast_to(theta[:, np.newaxis], block.shape)))
-        slope, curvature = slopes(z.high, sides[rows], None)
-        pair = Pairs(slope, curvature * z.low)
+        share = logistic_pairs(Pairs(z.high * side, z.low * side))
+        slope = Pairs(share.high * side, share.low * side)
         if row_weights is not None:
-            pair = scale_pairs(pair, row_weights[rows])
-        terms = scale_pairs(Pairs(pair.high[:, np.newaxis], pair.low[:, np.newaxis]), np.ascontiguousarray(block.T))
+            slope = scale_pairs(slope, row_weights[rows])
+        terms = scale_pairs(Pairs(slope.high[:, np.newaxis], slope.low[:, np.newaxis]), np.ascontiguousarray(block.T))
         total = add_pairs(total, pair_sum(terms))
-    total = add_pairs(total, two_product(theta - means, precisions))
+    total = add_pairs(total, scale_pairs(two_sum(theta, -means), precisions))
     return total.high + total.low

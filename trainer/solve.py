@@ -9,9 +9,7 @@ slope along it lies between minus half of what it was and zero, which for a conv
 curvature condition of Wolfe. The search needs no further reading of the columns. A start that is no better than zero
 gives way to zero, where every row has its full curvature: far out all of them can vanish in binary64.
 
-Last digits. Weights are multiples of 2^-30 (`grid`). Row order, threads, block sizes and libraries change the
-unrounded weights in their last bits, so a weight that lies near a midpoint of the grid is taken further with gradients
-in pairs of doubles until one more step cannot change the side.
+Last digits: `last_digits` rounds the weights so that row order, threads and libraries do not show.
 """
 
 from __future__ import annotations
@@ -29,16 +27,13 @@ from threadpoolctl import ThreadpoolController
 
 from runtime_min.errors import FitError, Problem
 from trainer.approach import Solve, approach, sample, sample_size
-from trainer.grid import WEIGHT_STEP
+from trainer.last_digits import to_grid
 from trainer.objective import (
     BLOCK_ROWS,
     Checked,
     Objective,
     Prior,
-    checked_gradient,
-    gradient_along,
     gradient_and_hessian,
-    gradient_in_pairs,
     log_odds,
     objective_of,
     slopes,
@@ -54,10 +49,6 @@ _APPROACHED = 3e-5  # R of an approaching step after which one Newton step settl
 _SAMPLE_SETTLED = 0.1  # the optimum of a sample is farther than that from the optimum of all rows
 _MOST_STEPS = 200
 _LEAST_PIVOT = 1e-13  # of the scaled Hessian, whose entries carry errors of some 1e-15
-_DOUBLE_STEPS, _PAIR_STEPS = 2, 3  # more Newton steps, at most, where a weight lies near a midpoint of the grid
-_LEAST_DOUBT = 1e-12  # no weight nearer to a midpoint of the grid than this is rounded without a closer look
-_DOUBT_PER_CHANGE = 100.0
-_DOUBT_PER_SD = 1e-14  # some 100 u: what rounding in single rows does to a step, in posterior sd
 
 _threads = ThreadpoolController()  # made once: looking the libraries up takes longer than a small fit
 
@@ -130,7 +121,7 @@ def solve(
                 )
             )
         covariance = found[1].inverse()
-        theta, checked = _to_grid(objective, found[0], covariance, block_rows)
+        theta, checked = to_grid(objective, found[0], covariance, found[1].scaling ** -2.0, block_rows)
     return _certified(theta, checked, covariance)
 
 
@@ -219,72 +210,6 @@ def _factor(hessian: Array) -> _Factor | None:
     if failed or not float(lower.diagonal().min()) ** 2 > _LEAST_PIVOT:
         return None
     return _Factor(lower, scaling)
-
-
-def _to_grid(objective: Objective, theta: Array, covariance: Array, block_rows: int) -> tuple[Array, Checked]:
-    """θ on the grid and the gradient there; with sums in pairs where the doubt about a weight reaches a midpoint.
-
-    `offset` is one more Newton step, from the rounded weights. What it changes is a sample of what rounding does to a
-    weight; the largest sample in posterior sd stands for all, so that no weight passes by a lucky one.
-    """
-    sds = np.sqrt(np.diagonal(covariance))
-    for _ in range(_DOUBLE_STEPS):
-        rounded = np.rint(theta / WEIGHT_STEP) * WEIGHT_STEP
-        checked = checked_gradient(objective, rounded, block_rows=block_rows)
-        offset = -(covariance @ checked.slope)
-        change = np.abs(rounded + offset - theta)
-        doubt = np.maximum(_DOUBT_PER_CHANGE * sds * (change / sds).max(), _LEAST_DOUBT)
-        undecided = np.abs(offset) + doubt >= 0.5 * WEIGHT_STEP
-        if not undecided.any():
-            return rounded, checked
-        theta = rounded + offset
-        if not (doubt > _LEAST_DOUBT).any():
-            break  # the sums are good enough, a weight does lie near a midpoint
-    final = _round_in_pairs(objective, theta, covariance, np.flatnonzero(undecided), block_rows)
-    if (final != rounded).any():
-        checked = checked_gradient(objective, final, block_rows=block_rows)
-    return final, checked
-
-
-def _round_in_pairs(
-    objective: Objective, theta: Array, covariance: Array, undecided: NDArray[np.intp], block_rows: int
-) -> Array:
-    """The grid point next to the optimum, for weights that sums in doubles leave undecided; θ is not rounded.
-
-    First only the undecided Newton steps are summed in pairs, which is cheap and leaves an error of some u sd. Where
-    that does not decide (columns that nearly repeat each other), everything is in pairs.
-    """
-    step = np.zeros(len(theta))
-    step[undecided] = -gradient_along(objective, theta, covariance[:, undecided], block_rows=block_rows)
-    doubt = np.maximum(_DOUBT_PER_CHANGE * np.abs(step), _DOUBT_PER_SD * np.sqrt(np.diagonal(covariance)))
-    if (_from_midpoint(theta, step) > doubt)[undecided].all():
-        return _nearest(theta, step)
-    for _ in range(_PAIR_STEPS):
-        step = -(covariance @ gradient_in_pairs(objective, theta))
-        if (_from_midpoint(theta, step) > _DOUBT_PER_CHANGE * np.abs(step)).all():
-            return _nearest(theta, step)
-        theta = theta + step
-    return _nearest(theta, np.zeros(len(theta)))
-
-
-def _from_midpoint(theta: Array, step: Array) -> Array:
-    """Distance of θ + step from the nearest midpoint of the grid."""
-    _, rest = _split(theta, step)
-    result: Array = np.abs(np.abs(rest - np.rint(rest)) - 0.5) * WEIGHT_STEP
-    return result
-
-
-def _nearest(theta: Array, step: Array) -> Array:
-    """θ + step on the grid, ties to the even multiple."""
-    even, rest = _split(theta, step)
-    result: Array = (even + np.rint(rest)) * WEIGHT_STEP
-    return result
-
-
-def _split(theta: Array, step: Array) -> tuple[Array, Array]:
-    """θ + step as an even multiple of the grid and a rest in units of it, the step not lost in the sum."""
-    even = 2.0 * np.rint(theta / (2.0 * WEIGHT_STEP))
-    return even, (theta - even * WEIGHT_STEP + step) / WEIGHT_STEP
 
 
 def _certified(theta: Array, checked: Checked, covariance: Array) -> Solution:

@@ -192,11 +192,13 @@ def _in_pairs(values: Array, row_weights: Array | None) -> tuple[float, float] |
 
 
 def _in_whole_numbers(values: Array, row_weights: Array | None) -> tuple[float, float]:
-    """Centre and scale of one column without any error; a constant column gets scale 1."""
+    """Centre and scale of one column without any error; scale 1 where it is constant, or as good as that in binary64."""
     mean, variance = exact_moments(values, row_weights)
     if variance == 0:
         return float(mean) + 0.0, 1.0
     scale, last_bit = round_scale(variance)
+    if scale == 0.0:
+        return float(mean) + 0.0, 1.0
     return round_centre(mean, last_bit), scale
 
 
