@@ -192,7 +192,7 @@ def _in_pairs(values: Array, row_weights: Array | None) -> tuple[float, float] |
 
 
 def _in_whole_numbers(values: Array, row_weights: Array | None) -> tuple[float, float]:
-    """Centre and scale of one column without any error; scale 1 where it is constant, or as good as that in binary64."""
+    """Centre and scale of one column without any error; scale 1 where it is constant or as good as that."""
     mean, variance = exact_moments(values, row_weights)
     if variance == 0:
         return float(mean) + 0.0, 1.0
