@@ -64,7 +64,7 @@ def _steps(sealed: SealedModel) -> Iterator[Step]:
                 yield Step("product", entry.name, least, most, accumulator)
                 power = 2 ** _int(term.shift)
                 least, most = least * power, most * power
-                yield Step("product, shifted", entry.name, least, most, accumulator)
+                yield Step("shifted product", entry.name, least, most, accumulator)
             lowest, highest = lowest + least, highest + most
             yield Step("sum", entry.name, lowest, highest, accumulator)
     for threshold in (sealed.decision.low, sealed.decision.high):

@@ -189,5 +189,7 @@ def _blame(inputs: tuple[Input, ...], lines: list[ExactScore], threshold: Fracti
         return Problem(place, f"found a threshold of {size}, {beyond}", "correct the costs or the threshold")
     if place == "intercept":
         return Problem(place, f"log-odds reach {size} in the middle of the ranges, {beyond}", "check ranges and rows")
+    if any(place == f'input "{entry.name}"' and entry.levels for entry in inputs):
+        return Problem(place, f"a level of it weighs {size}, {beyond}", "choose a stronger prior")
     found = f"its weight over half its range comes to log-odds of {size}, {beyond}"
     return Problem(place, found, "narrow its range, or choose a stronger prior")

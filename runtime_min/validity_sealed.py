@@ -19,7 +19,10 @@ def sealed_problems(sealed: SealedModel) -> list[Found]:
     if sealed.arithmetic not in ARITHMETICS:
         known = ", ".join(ARITHMETICS)
         return [("model.arithmetic", f'found "{sealed.arithmetic}"', f"this version knows {known}")]
-    return list(_sealed(sealed))
+    found = list(_sealed(sealed))
+    if not found and sealed.arithmetic in INTEGERS:
+        found = list(_overflows(sealed))
+    return found
 
 
 def count_limits(counts: Counts) -> tuple[int, int]:
@@ -104,18 +107,7 @@ def _floats(sealed: SealedModel) -> Iterator[Found]:
 
 
 def _integers(sealed: SealedModel) -> Iterator[Found]:
-    """What integers carry, nothing of floating point, and that no step of a device overflows."""
-    told = list(_integer_fields(sealed))
-    yield from told
-    if not told:
-        for step in proof(sealed):
-            if not step.fits:
-                of = f' of "{step.of}"' if step.of else ""
-                found = f"{step.what}{of} comes to {step.largest}, beyond a signed integer of {step.bits} bits"
-                yield "model", found, AGAIN
-
-
-def _integer_fields(sealed: SealedModel) -> Iterator[Found]:
+    """What integers carry, and nothing of floating point."""
     if sealed.exponential is not None:
         yield "model.exponential", "found constants", f"{sealed.arithmetic} has none"
     most = ACCUMULATOR_BITS[sealed.arithmetic] - 2
@@ -136,10 +128,6 @@ def _integer_fields(sealed: SealedModel) -> Iterator[Found]:
             yield f"{place}.datum", "found null", "a count has a datum"
         if (term.shift is None) == (term.form == "value") or not 0 <= (term.shift or 0) <= most:
             yield f"{place}.shift", f"found {term.shift}", "a count has one, a level has none"
-        if len(term.of) != 1 or not 0 <= term.of[0] < len(sealed.inputs) or not all(term.weights):
-            yield f"{place}", "is of no input", AGAIN
-    if any(len(term.weights) != len(sealed.intercepts) for term in sealed.terms):
-        yield "model.terms", "found weights for another number of classes", AGAIN
     for position, entry in enumerate(sealed.inputs):
         if not entry.levels and entry.counts is None:
             yield f"model.inputs[{position}].counts", "found null", "integers need them"
@@ -148,6 +136,15 @@ def _integer_fields(sealed: SealedModel) -> Iterator[Found]:
     for place, number in device_numbers(sealed):
         if not isinstance(number, int):
             yield place, f"found {number!r}", f"expected an integer in {sealed.arithmetic}"
+
+
+def _overflows(sealed: SealedModel) -> Iterator[Found]:
+    """Every step of a device that the proof does not cover, in a model that has no other problem."""
+    for step in proof(sealed):
+        if not step.fits:
+            of = f' of "{step.of}"' if step.of else ""
+            found = f"{step.what}{of} comes to {step.largest}, beyond a signed integer of {step.bits} bits"
+            yield "model", found, AGAIN
 
 
 def _input(place: str, entry: Input) -> Iterator[Found]:

@@ -19,10 +19,11 @@ from typing import Any
 
 import jsonschema
 import pytest
-from models import sample_extended_models, sample_sealed_models
+from models import sample_extended_models, sample_integer_models, sample_sealed_models
 
 from runtime_min.canonical import canonical
 from runtime_min.codec import load, load_trained, model_id, sealed_text, trained_text
+from runtime_min.device_numbers import device_numbers
 from runtime_min.errors import FileError
 from runtime_min.model import Choice, SealedModel, Strength, TrainedModel
 
@@ -35,11 +36,13 @@ SCHEMAS = {
 CHOICE = Choice("cross-validation", 5, 0.5, (Strength(0.5, 0.31, 0.02), Strength(1.0, 0.32, 0.02)))
 SAMPLES = sample_sealed_models()
 TRAINED, SEALED = SAMPLES["pump_binary32"]
-for _name, (_trained, _sealed) in sample_extended_models().items():
+for _name, (_trained, _sealed) in (sample_extended_models() | sample_integer_models()).items():
     SAMPLES[_name] = dataclasses.replace(_trained, choice=CHOICE), _sealed
 EXTENDED_TRAINED, EXTENDED = SAMPLES["mixed_binary32"]
+COUNTED = SAMPLES["pump_int32"][1]
 SEALED_DATA = json.loads(sealed_text(SEALED))
 TRAINED_DATA = json.loads(trained_text(TRAINED))
+COUNTED_DATA = json.loads(sealed_text(COUNTED))
 EXTENDED_DATA = json.loads(sealed_text(EXTENDED))
 EXTENDED_TRAINED_DATA = json.loads(trained_text(EXTENDED_TRAINED))
 
@@ -521,10 +524,119 @@ EXTENDED_TRAINED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
     ),
 }
 
+# Of the model "pump" in int32: every number has counts that sealing chose, input 5 has levels.
+COUNTED_DAMAGE: dict[str, tuple[Path_, Any, bool, str]] = {
+    "half a weight": (
+        ("model", "terms", 0, "weights", 0, 0),
+        0.5,
+        False,
+        f"model.terms[0].weights[0][0]: found 0.5, expected an integer; {AGAIN}",
+    ),
+    "a short integer as a text": (
+        ("model", "intercepts", 0),
+        "12",
+        True,
+        f'model.intercepts[0]: found "12", expected an integer; {AGAIN}',
+    ),
+    "a long integer with a sign too many": (
+        ("model", "intercepts", 0),
+        "+12345678901234567",
+        True,
+        f'model.intercepts[0]: found "+12345678901234567", expected an integer; {AGAIN}',
+    ),
+    "intercept beyond the accumulator": (
+        ("model", "intercepts", 0),
+        str(2**63),
+        False,
+        "model: intercept comes to 9223372036854775808, beyond a signed integer of 64 bits",
+    ),
+    "threshold that means a fault": (
+        ("model", "decision", "low"),
+        str(-(2**63)),
+        False,
+        "model: threshold comes to 9223372036854775808, beyond a signed integer of 64 bits",
+    ),
+    "weight beyond its bits": (
+        ("model", "terms", 0, "weights", 0, 0),
+        2**31,
+        False,
+        'model: weight of "suction" comes to 2147483648, beyond a signed integer of 32 bits',
+    ),
+    "shift that overflows": (
+        ("model", "terms", 0, "shift"),
+        40,
+        False,
+        'model: shifted product of "suction" comes to ',
+    ),
+    "no shift": (
+        ("model", "terms", 0, "shift"),
+        None,
+        False,
+        "model.terms[0].shift: found None; a count has one, a level has none",
+    ),
+    "shift of a level": (
+        ("model", "terms", 5, "shift"),
+        1,
+        True,
+        "model.terms[5].shift: found 1; a count has one, a level has none",
+    ),
+    "no datum": (("model", "terms", 0, "datum"), None, False, "model.terms[0].datum: found null; a count has a datum"),
+    "no counts": (
+        ("model", "inputs", 0, "counts"),
+        None,
+        False,
+        "model.inputs[0].counts: found null; integers need them",
+    ),
+    "no binary point": (
+        ("model", "accumulator_shift"),
+        None,
+        True,
+        "model.accumulator_shift: found None; expected 0 to 62",
+    ),
+    "no table": (("model", "table"), None, True, "model.table: found null; int32 needs one"),
+    "table that starts elsewhere": (
+        ("model", "table", "nodes", 0),
+        16385,
+        False,
+        "model.table.nodes: found others than 16384 and on upwards to 32768 at most",
+    ),
+    "table that falls": (
+        ("model", "table", "nodes", 3),
+        16384,
+        False,
+        "model.table.nodes: found others than 16384 and on upwards to 32768 at most",
+    ),
+    "table of no width": (
+        ("model", "table", "step"),
+        0,
+        True,
+        f"model.table: found drop 41 and step 0; {SEAL_AGAIN}",
+    ),
+    "table too wide for 32 bits": (
+        ("model", "table", "step"),
+        30,
+        False,
+        "model: between two nodes comes to ",
+    ),
+    "exponential in integers": (
+        ("model", "exponential"),
+        EXTENDED_DATA["model"]["exponential"],
+        True,
+        f"model.exponential.inv_ln2: found {EXTENDED.exponential.inv_ln2!r}, expected an integer; {AGAIN}",
+    ),
+    "counts changed": (
+        ("model", "inputs", 0, "counts", "chosen"),
+        False,
+        False,
+        f"about.request.inputs: are not the inputs of the model; {SEAL_AGAIN}",
+    ),
+}
+
 DAMAGES = {
     "sealed": (SEALED_DATA, SEALED_DAMAGE),
     "trained": (TRAINED_DATA, TRAINED_DAMAGE),
     "extended sealed": (EXTENDED_DATA, EXTENDED_DAMAGE),
+    "counted sealed": (COUNTED_DATA, COUNTED_DAMAGE),
     "extended trained": (EXTENDED_TRAINED_DATA, EXTENDED_TRAINED_DAMAGE),
 }
 
@@ -545,7 +657,7 @@ def damaged(data: Any, place: Path_, value: Any) -> Any:
 def test_damaged_model_is_refused_with_its_place(group: str, name: str, tmp_path: Path) -> None:
     whole, table = DAMAGES[group]
     place, value, seen, sentence = table[name]
-    kind = group.removeprefix("extended ")
+    kind = group.rpartition(" ")[2]
     data = damaged(whole, place, value)
     found = problems_of(tmp_path, kind, json.dumps(data))
     sentence = sentence.replace("{0}", TRAINED.terms[0].name)
@@ -592,7 +704,7 @@ def _is_number(value: Any) -> bool:
     return isinstance(value, (int, float)) and not isinstance(value, bool)
 
 
-@pytest.mark.parametrize("name", ["lenient_binary32", "mixed_binary32"])
+@pytest.mark.parametrize("name", ["lenient_binary32", "mixed_binary32", "rare_int32"])
 @pytest.mark.parametrize("kind", SCHEMAS)
 def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(
     kind: str, name: str, tmp_path: Path
@@ -616,3 +728,26 @@ def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(
                 refused += 1
                 assert found, (place, replacement(inner))
     assert refused > 500
+
+
+# --- integers --------------------------------------------------------------------------------------------------------
+
+
+def test_integers_beyond_2_to_the_53_are_texts_in_the_file_and_ints_again_when_read(tmp_path: Path) -> None:
+    """RFC 8785 and I-JSON (RFC 7493, section 2.2) allow no larger integer as a number."""
+    intercept = COUNTED.intercepts[0]
+    assert abs(intercept) > 2**53
+    assert COUNTED_DATA["model"]["intercepts"] == [str(intercept)]
+    (tmp_path / "sealed.json").write_text(sealed_text(COUNTED), encoding="utf-8")
+    back = load(tmp_path / "sealed.json")
+    assert type(back.intercepts[0]) is int
+    assert type(back.inputs[0].low) is int
+    assert back.intercepts == COUNTED.intercepts
+
+
+def test_whole_numbers_of_floating_point_are_read_as_floats(tmp_path: Path) -> None:
+    """Canonical JSON writes 1.0 as 1."""
+    (tmp_path / "sealed.json").write_text(sealed_text(SEALED), encoding="utf-8")
+    assert SEALED_DATA["model"]["exponential"]["coefficients"][0] == 1
+    back = load(tmp_path / "sealed.json")
+    assert all(type(number) is float for _, number in device_numbers(back))
