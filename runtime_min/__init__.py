@@ -10,6 +10,7 @@ _HOMES = {
     "load_trained": "codec",
     "seal": "sealing",
     "log_odds": "score",
+    "outputs": "score",
     "probability": "score",
     "decide": "score",
     "check_inputs": "score",
