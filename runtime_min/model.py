@@ -241,11 +241,20 @@ class DecisionRequest:
 
 
 @dataclass(frozen=True)
+class Placement:
+    """Where the table of coefficients lies in the device's memory, and its byte order, "little" or "big"."""
+
+    address: int
+    byte_order: str
+
+
+@dataclass(frozen=True)
 class Request:
     """All that sealing needs beside the trained model. `tolerance` is the largest allowed log-odds error, or None.
 
     `compiler`: the user's own command line, which compiles the header in a check. `part`: the emulated part that runs
-    it there as well. `real_rows`: vectors and witness may carry rows of the data.
+    it there as well. `real_rows`: vectors and witness may carry rows of the data. `table`: where the table of
+    coefficients lies, if one is written.
     """
 
     model: str
@@ -256,6 +265,7 @@ class Request:
     compiler: str | None = None
     part: str | None = None
     real_rows: bool = False
+    table: Placement | None = None
 
 
 # --- sealed ----------------------------------------------------------------------------------------------------------

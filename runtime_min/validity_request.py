@@ -17,6 +17,7 @@ from runtime_min.validity_rules import (
 )
 
 MOST_BITS = 32
+ADDRESS_BITS = 32
 
 
 def delivery_problems(entry: Input | InputRequest) -> Iterator[Found]:
@@ -57,6 +58,16 @@ def decision_problems(request: Request) -> Iterator[Found]:
         yield "tolerance", f"found {shown(request.tolerance)}", f"expected {EXACT_TEXT}, above 0"
 
 
+def placement_problems(request: Request) -> Iterator[Found]:
+    """Problems of where the table lies, as (key, what was found, what to do)."""
+    if request.table is None:
+        return
+    if not 0 <= request.table.address < 2**ADDRESS_BITS:
+        yield "table.address", f"found {request.table.address}", f"expected an address below 2^{ADDRESS_BITS}"
+    if request.table.byte_order not in ("little", "big"):
+        yield "table.byte_order", f"found {shown(request.table.byte_order)}", "expected little or big"
+
+
 def request_problems(sealed: SealedModel) -> Iterator[Found]:
     """Problems of the request in a sealed file, the model's inputs among them."""
     request = sealed.about.request
@@ -75,7 +86,7 @@ def request_problems(sealed: SealedModel) -> Iterator[Found]:
                 )
         for key, found, todo in delivery_problems(entry):
             yield f"{at}.{key}", found, todo
-    for key, found, todo in decision_problems(request):
+    for key, found, todo in (*decision_problems(request), *placement_problems(request)):
         yield f"{place}.{key}", found, todo
 
 

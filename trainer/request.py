@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from fractions import Fraction
 
-from runtime_min.model import Counts, DecisionRequest, InputRequest, Request
+from runtime_min.model import Counts, DecisionRequest, InputRequest, Placement, Request
 from trainer.plan import CountsPlan, Plan
 from trainer.table import Rows
 
@@ -38,6 +38,7 @@ def request_of(plan: Plan, rows: Rows) -> Request:
         compiler=plan.device.compiler,
         real_rows=plan.real_rows,
         part=plan.device.part,
+        table=Placement(plan.table.address, plan.table.byte_order) if "table" in plan.write else None,
     )
 
 
