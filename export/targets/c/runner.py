@@ -57,8 +57,12 @@ def run_one(way: Way, artefact: Path, sealed: SealedModel, text: str, row_count:
             done = run_program(command, way.compiler.seconds, folder=folder, environment={**os.environ, **PLAIN_WORDS})
             if done.trouble:
                 return broken(f"the compiler did not finish ({done.trouble})")
+            if done.status is not None and done.status < 0:
+                return broken(f"the compiler was killed by signal {-done.status}")
             if done.status != 0:
                 return broken("it does not compile: " + _shown(done.err, folder))
+            if b"warning" in done.err:
+                return broken("it compiles with a warning: " + _shown(done.err, folder))
             done = run_program([str(program)], RUN_SECONDS, text.encode(), folder)
             if done.trouble:
                 return broken(f"the program did not finish ({done.trouble})")
@@ -120,4 +124,5 @@ def _shown(words: bytes, folder: str) -> str:
     text = words.decode("utf-8", "replace").replace(folder + "/", "")
     lines = [line.strip() for line in text.splitlines()]
     wanted = [line for line in lines if "error" in line or "warning" in line] or lines
-    return " | ".join(wanted[:SHOWN_LINES]) or "no message"
+    shown = " | ".join(wanted[:SHOWN_LINES]) or "no message"
+    return "".join(character if character.isprintable() else "?" for character in shown)

@@ -101,7 +101,7 @@ def fused_flags() -> tuple[str, ...]:
     if platform.machine() not in ("x86_64", "AMD64"):
         return ()
     try:
-        flags = set(Path("/proc/cpuinfo").read_text().split())
+        flags = set(Path("/proc/cpuinfo").read_text(encoding="ascii", errors="replace").split())
     except OSError:
         return ()
     return ("-march=haswell",) if {"fma", "avx2", "bmi1", "bmi2", "movbe"} <= flags else ()
