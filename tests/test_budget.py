@@ -495,14 +495,15 @@ def test_witness_is_moved_to_the_count_that_the_device_has() -> None:
 
 
 def test_advice_names_the_costliest_item_the_arithmetic_and_the_origin() -> None:
-    # Half a unit at 1050 is 2^-14, 6.11e-5 rounded up; after subtracting 1000, at 50, it is 2^-19.
+    # Half a unit at 1050 is 2^-14, 6.11e-5 rounded up; after subtracting 1000, at 50, it is 2^-19. Counts of 2^-25 kPa
+    # reach 50 kPa from 1000 in 32 bits: half of one is 1.5e-8 rounded up.
     trained, sealed = line("950", "1050", intercept=-1000.0)
     problem = advise(trained, sealed, derive(trained, sealed), Fraction(1, 100_000))
     assert str(problem) == (
         'error budget: 6.11e-05 in log-odds is more than the tolerance 1e-05, and the costliest item is input "x" '
-        'rounded to binary32, 6.11e-05; choose arithmetic = "binary64" (its bound is 1.14e-13), or write origin = 1000 '
-        'at "x": the device subtracts it before the value becomes a float (the bound is then 1.91e-06), or raise the '
-        "tolerance to 6.11e-05"
+        'rounded to binary32, 6.11e-05; choose arithmetic = "binary64" (its bound is 1.14e-13), or choose arithmetic = '
+        '"int32" (its bound is 1.5e-08), or write origin = 1000 at "x": the device subtracts it before the value becomes '
+        "a float (the bound is then 1.91e-06), or raise the tolerance to 6.11e-05"
     )
 
 
