@@ -282,7 +282,8 @@ def test_each_bad_file_is_named_in_one_sentence(tmp_path: Path, text: str | byte
         ),
         (
             "a,state\n1e39,x\n2e39,y\n",
-            'column "a": found 9e+38, too large for binary32, a tenth beyond the rows; write a range in the plan, or another arithmetic',
+            'column "a": found 9e+38, too large for binary32, a tenth beyond the rows; '
+            "write a range in the plan, or another arithmetic",
         ),
     ],
 )
