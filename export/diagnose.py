@@ -10,6 +10,7 @@ import math
 from collections.abc import Sequence
 
 import numpy as np
+import numpy.typing as npt
 
 from export.targets import Output, Vector
 from export.vector_files import forms_of
@@ -120,7 +121,7 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
         named = [names[at] for at in order[:3]]
         return "the differences follow " + " and ".join(named)
     if sealed.arithmetic in INTEGERS:
-        return _integer_cause([int(delta) for delta in deltas], len(sealed.terms))
+        return _integer_cause(sealed, table, [int(delta) for delta in deltas])
     if max(ulps) <= ROUNDING_ULPS * len(sealed.terms):
         return (
             f"differences of at most {max(ulps):.0f} in the last place of the largest sum: a last digit of a number is "
@@ -129,8 +130,18 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
     return "no single number explains the differences: look at the order of the terms and at how inputs are prepared"
 
 
-def _integer_cause(deltas: Sequence[int], terms: int) -> str:
-    """Of differences that follow no number: wrapped integers are off by multiples of a high power of two."""
+def _integer_cause(sealed: SealedModel, table: npt.NDArray[np.float64], deltas: Sequence[int]) -> str:
+    """Of differences that follow no number: a lost sign shows in the rows that have one, wrapped integers are off by
+    multiples of a high power of two. table (rows, 1 + terms' columns): the counts less their datums."""
+    differs, terms = np.array([delta != 0 for delta in deltas]), len(sealed.terms)
+    column = 1
+    for term in sealed.terms:
+        negative = table[:, column] + (term.datum or 0) < 0
+        # Not all of them need differ: a missing value's stand-in may be negative too.
+        if term.form == "value" and not (differs & ~negative).any() and differs.sum() > 0.9 * negative.sum():
+            name = sealed.inputs[term.of[0]].name
+            return f'only rows where "{name}" is negative differ: look at how its sign is extended'
+        column += len(term.weights[0]) - 1 if term.form == "level" else 1
     if math.gcd(*deltas) % WRAPPED == 0:
         return f"all differences are multiples of {WRAPPED}: an integer overflows (look at the widths of the products)"
     if max(map(abs, deltas)) <= terms:

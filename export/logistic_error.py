@@ -41,7 +41,7 @@ def probability_error(sealed: SealedModel) -> Fraction:
 def table_error(table: Table, shift: int) -> Fraction:
     """Largest |q(a) / 2^15 - logistic(a / 2^shift)| over every whole a, 0 included; of -a it is the same."""
     ends = sorted({pair for plateau in _plateaux(table) for pair in plateau})
-    a = np.array([float(Fraction(at, 2**shift)) for at, _ in ends])
+    a = np.array([at / 2**shift for at, _ in ends])
     q = np.array([value for _, value in ends]) / ONE
     off = np.abs(q - 1 / (1 + np.exp(-a)))
     near = np.flatnonzero(off >= off.max() - BINARY64_SLACK)
