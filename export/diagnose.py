@@ -132,15 +132,15 @@ def _log_odds_cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Seq
 
 def _integer_cause(sealed: SealedModel, table: npt.NDArray[np.float64], deltas: Sequence[int]) -> str:
     """Of differences that follow no number: a lost sign shows in the rows that have one, wrapped integers are off by
-    multiples of a high power of two. table (rows, 1 + terms' columns): the counts less their datums."""
+    multiples of a high power of two. table (rows, columns of the terms): counts less their datums."""
     differs, terms = np.array([delta != 0 for delta in deltas]), len(sealed.terms)
     column = 1
     for term in sealed.terms:
         negative = table[:, column] + (term.datum or 0) < 0
-        # Not all of them need differ: a missing value's stand-in may be negative too.
-        if term.form == "value" and not (differs & ~negative).any() and differs.sum() > 0.9 * negative.sum():
+        # Not quite all: the stand-in of a missing value may be negative, and another input below a range.
+        if term.form == "value" and negative.any() and (differs != negative).sum() < 0.1 * negative.sum():
             name = sealed.inputs[term.of[0]].name
-            return f'only rows where "{name}" is negative differ: look at how its sign is extended'
+            return f'the rows where "{name}" is negative differ: look at how its sign is extended'
         column += len(term.weights[0]) - 1 if term.form == "level" else 1
     if math.gcd(*deltas) % WRAPPED == 0:
         return f"all differences are multiples of {WRAPPED}: an integer overflows (look at the widths of the products)"

@@ -92,7 +92,7 @@ def test_count_that_was_taken_without_its_sign_is_named() -> None:
     def unsigned(inputs: tuple[float, ...]) -> Output:
         return expected(SEALED, [count % 2**16 if count != -(2**15) else count for count in inputs])
 
-    assert 'only rows where "shunt" is negative differ' in sentence(SEALED, unsigned)
+    assert 'the rows where "shunt" is negative differ' in sentence(SEALED, unsigned)
 
 
 def test_first_difference_is_shown_in_decimal_and_in_the_width_of_the_number() -> None:
