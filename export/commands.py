@@ -235,12 +235,12 @@ def _fit(request: argparse.Namespace) -> int:
 
 def _export(request: argparse.Namespace) -> int:
     from export.release import export_artefacts
-    from export.targets import TARGETS
+    from export.targets import WRITTEN_BY_DEFAULT
     from runtime_min.codec import load
 
     with _told(request.into), _progress() as progress:
         progress("writing the artefacts")
-        written = export_artefacts(load(request.sealed), request.into, tuple(TARGETS))
+        written = export_artefacts(load(request.sealed), request.into, WRITTEN_BY_DEFAULT)
     _print([f"{'written':<12}{request.into / name}" for name in written])
     return 0
 

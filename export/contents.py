@@ -21,7 +21,9 @@ def artefacts(
 ) -> dict[str, bytes]:
     """Every file that follows from the sealed model alone; HANDOFF.md says the prevalence where one is given."""
     self_test = self_test_of(sealed, vectors)
-    files = {TARGETS[name].file(sealed): TARGETS[name].emit(sealed, self_test) for name in write}
+    files: dict[str, bytes] = {}
+    for name in write:
+        files |= TARGETS[name].files(sealed, self_test)
     return {
         **files,
         f"{sealed.name}.sealed.json": sealed_text(sealed).encode(),

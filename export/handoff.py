@@ -10,7 +10,8 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 
 from export.coefficients import coefficients, coefficients_csv, one_line
 from export.targets import TARGETS, Vector
-from export.vector_files import forms_of
+from export.targets.table.layout import layout
+from export.vector_files import decimal_text, forms_of
 from export.worked_example import worked_example
 from runtime_min.arithmetic import ACCUMULATOR_BITS, WEIGHT_BITS, from_bits
 from runtime_min.integer_score import count_bits, missing_count
@@ -56,6 +57,8 @@ def handoff_md(
             for target in TARGETS.values()
             if target.name in write
         ],
+        table=layout(sealed) if "table" in write else None,
+        table_value=lambda value: str(int(value)) if sealed.table else decimal_text(value, sealed.arithmetic),
         **(_integer_words(sealed) if sealed.arithmetic in INTEGERS else _float_words(sealed)),
     )
     return text.encode()

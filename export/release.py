@@ -14,7 +14,7 @@ from typing import Any
 from export import check, folder
 from export.contents import MANIFEST, MANIFEST_FORMAT, artefacts, contents
 from export.parts.measure import Measure
-from export.targets import TARGETS
+from export.targets import WRITTEN_BY_DEFAULT
 from export.vectors import make_vectors
 from runtime_min.errors import Problem, ReleaseError
 from runtime_min.model import SealedModel, TrainedModel
@@ -25,7 +25,7 @@ def write_release(
     trained: TrainedModel,
     into: str | Path,
     *,
-    write: Sequence[str] = tuple(TARGETS),
+    write: Sequence[str] = WRITTEN_BY_DEFAULT,
     thorough: bool = False,
     unchecked: Sequence[str] = (),
     on: Sequence[str] = (),

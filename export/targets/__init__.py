@@ -67,6 +67,7 @@ class Run:
 
     `ran` is False where a tool is missing; `trouble` then says what to install. Where it ran but broke (a compiler
     error or warning, a crash, a time-out, output that is none), `ran` is True and `trouble` says what happened.
+    `outputs` is None where the artefact computes nothing and was read back instead.
     """
 
     what: str
@@ -74,7 +75,7 @@ class Run:
     trouble: str | None
     model_id: str | None
     self_test: int | None
-    outputs: tuple[Output, ...]
+    outputs: tuple[Output, ...] | None
 
 
 Emit = Callable[[SealedModel, SelfTest], bytes]
@@ -97,6 +98,11 @@ class Target:
         """The artefact. Pure: the same arguments give the same bytes."""
         return cast(Emit, import_module(f"export.targets.{self.name}.emit").emit)(sealed, self_test)
 
+    def files(self, sealed: SealedModel, self_test: SelfTest) -> dict[str, bytes]:
+        """The artefact and what goes beside it, by file name."""
+        beside = getattr(import_module(f"export.targets.{self.name}.emit"), "emit_beside", lambda sealed: {})
+        return {self.file(sealed): self.emit(sealed, self_test), **beside(sealed)}
+
     def run(
         self, artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], thorough: bool
     ) -> Iterator[Run]:
@@ -110,5 +116,7 @@ TARGETS = {
         Target("python", ".py", ("binary64", "binary32")),
         Target("c", ".h", ("binary64", "binary32")),
         Target("onnx", ".onnx", ("binary64", "binary32")),
+        Target("table", "_table.h", ("binary64", "binary32", "int16", "int32")),
     )
 }
+WRITTEN_BY_DEFAULT = ("python", "c", "onnx")
