@@ -56,8 +56,8 @@ with an optimum ask for. Neighbours are 1.37 times apart: well within the precis
 LOSS_STEP = 1e-12
 """Mean log losses are compared in these steps: differences below say nothing."""
 
-_SETTLED = 1e-4  # a Newton step that changes no log-odds by more leaves errors of its square
-_LOSS_ERROR = 1e-6  # far above what those errors make of a mean loss
+_SETTLED = 1e-4  # a Newton step that changes no log-odds by more leaves errors of its square, 1e-8
+_LOSS_ERROR = 1e-7  # of a mean loss: ten times that, since rows left out may lie farther out; seen: below 1e-9
 
 
 @dataclass(frozen=True)
