@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from fractions import Fraction
 
+import mpmath
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -12,7 +13,7 @@ from hypothesis import strategies as st
 
 from runtime_min.errors import FitError
 from runtime_min.model import Score, TrainedInput, TrainedTerm
-from trainer.witness import INVENTED_ROWS, log_odds_with_bounds, witness_of
+from trainer.witness import INVENTED_ROWS, log_odds_with_bounds, shift_to_field, witness_of
 
 INPUTS = (
     TrainedInput("suction", "kPa", (), None),
@@ -106,6 +107,33 @@ def test_bound_holds_for_numbers_of_any_magnitude(
     # Not silly: a few u of what is added, and where products underflow a few of the smallest numbers.
     small = (len(terms) + sum(map(abs, score.weights))) * 16 * 2.0**-1074
     assert Fraction(float(bounds[0])) <= (len(terms) + 5) * Fraction(1, 2**52) * size + Fraction(small)
+
+
+shares = st.integers(1, 10**6 - 1).map(lambda parts: Fraction(parts, 10**6))
+class_weights = st.tuples(st.floats(1e-12, 1e12), st.floats(1e-12, 1e12))
+
+
+@given(cases(), shares, class_weights)
+@settings(deadline=None, max_examples=200)
+def test_bound_holds_with_the_shift_to_the_field(
+    case: tuple[tuple[TrainedTerm, ...], Score, tuple[float, ...]], share: Fraction, sums: tuple[float, float]
+) -> None:
+    """The shift by mpmath with 100 digits: logit(share in the field) - ln(events / others among the rows)."""
+    terms, score, row = case
+    shift = shift_to_field(share, sums)
+    with mpmath.workdps(100):
+        field = mpmath.mpf(share.numerator) / (share.denominator - share.numerator)
+        exact_shift = mpmath.log(field) - mpmath.log(mpmath.mpf(sums[1]) / mpmath.mpf(sums[0]))
+        scaled = Fraction(int(mpmath.nint(exact_shift * mpmath.mpf(2) ** 250)), 2**250)
+    assert abs(Fraction(shift) - scaled) <= Fraction(1, 2**53) * abs(scaled) + Fraction(1, 2**240)
+    log_odds, bounds = log_odds_with_bounds(terms, score, np.array([row]), shift)
+    if not (np.isfinite(log_odds[0]) and np.isfinite(bounds[0])):
+        return
+    exact, size = exact_log_odds(terms, score, row)
+    assert abs(Fraction(float(log_odds[0])) - exact - scaled) <= Fraction(float(bounds[0])) + Fraction(1, 2**240)
+    small = (len(terms) + sum(map(abs, score.weights))) * 16 * 2.0**-1074
+    allowed = (len(terms) + 6) * Fraction(1, 2**52) * (size + abs(scaled)) + Fraction(small)
+    assert Fraction(float(bounds[0])) <= allowed
 
 
 @pytest.mark.parametrize("terms", [1, 40, 400])
