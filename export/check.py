@@ -27,6 +27,7 @@ from export.parts.measure import Measure, measure
 from export.parts.program import TroubleError
 from export.parts.run import run_part
 from export.targets import TARGETS, Run, Vector
+from export.targets.c.own_compiler import compile_own
 from export.vector_files import read_vectors
 from export.witness import witness_misses
 from runtime_min.codec import load, load_trained, sealed_text
@@ -123,6 +124,12 @@ def check_release(
         artefact = into / TARGETS[name].file(sealed)
         for run in TARGETS[name].run(artefact, sealed, [vector.inputs for vector in vectors_on_file], thorough):
             checks.append(_compared(sealed, vectors_on_file, run, artefact.name, name))
+    compiler = sealed.about.request.compiler
+    if compiler is not None and "c" in manifest["write"]:
+        progress("compiling with the plan's compiler")
+        artefact = into / TARGETS["c"].file(sealed)
+        run, size = compile_own(compiler, artefact, sealed)
+        checks.append(Check(artefact.name, run.what, run.ran, run.trouble is None, 0, run.trouble or size, "c"))
     measures: list[Measure] = []
     for part in _parts(sealed, on):
         progress(f"running {TARGETS['c'].file(sealed)} on {part.shown}")
