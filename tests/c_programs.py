@@ -54,7 +54,7 @@ def run_header(text: str, sealed: SealedModel, way: Way, folder: Path, rows: Seq
     rows = rows or [vector.inputs for vector in make_vectors(sealed)]
     path = folder / "edited.h"
     path.write_text(text, encoding="ascii", newline="\n")
-    return run_one(way, path, sealed, rows_as_bits(rows, sealed.arithmetic), len(rows))
+    return run_one(way, path, sealed, rows_as_bits(rows, sealed), len(rows))
 
 
 def unprotected(text: str, name: str) -> str:

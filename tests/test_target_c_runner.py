@@ -109,8 +109,8 @@ def test_compiler_that_fails_is_the_trouble_of_the_run(script: str, trouble: str
 def test_rows_are_rounded_to_the_arithmetic_as_bits() -> None:
     # IEEE 754-2019: 0.1 in binary32 is 3DCCCCCD; too large for binary32 is infinity
     rows = [(0.1, 1e39), (-0.0, float("nan"))]
-    assert runner.rows_as_bits(rows, "binary32") == "3dcccccd 7f800000\n80000000 7fc00000\n"
-    assert runner.rows_as_bits([(0.1,)], "binary64") == "3fb999999999999a\n"
+    assert runner.rows_as_bits(rows, SEALED) == "3dcccccd 7f800000\n80000000 7fc00000\n"
+    assert runner.rows_as_bits([(0.1,)], line_model("binary64")) == "3fb999999999999a\n"
 
 
 def test_thousands_of_rows_and_none_at_all(tmp_path: Path) -> None:
@@ -118,7 +118,7 @@ def test_thousands_of_rows_and_none_at_all(tmp_path: Path) -> None:
     rows = [(position / 1000.0,) for position in range(8001)]  # z = -1 + x / 2 >= 1 from x = 4 on
     run = run_header(header(SEALED), SEALED, way, tmp_path, rows)
     assert [one.decision for one in run.outputs] == [int(x >= 4.0) for (x,) in rows]
-    text = runner.rows_as_bits([], "binary32")
+    text = runner.rows_as_bits([], SEALED)
     (tmp_path / "line.h").write_text(header(SEALED))
     none = runner.run_one(way, tmp_path / "line.h", SEALED, text, 0)
     assert (none.trouble, none.outputs, none.self_test) == (None, (), 0)

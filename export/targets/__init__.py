@@ -114,7 +114,7 @@ TARGETS = {
     target.name: target
     for target in (
         Target("python", ".py", ("binary64", "binary32")),
-        Target("c", ".h", ("binary64", "binary32")),
+        Target("c", ".h", ("binary64", "binary32", "int16", "int32")),
         Target("onnx", ".onnx", ("binary64", "binary32")),
         Target("table", "_table.h", ("binary64", "binary32", "int16", "int32")),
     )

@@ -6,9 +6,10 @@ import math
 
 from export.targets import SelfTest, Vector
 from export.targets.c import lexical
+from export.targets.c.emit_integers import PARTS, integer_context, row_words
 from export.targets.c.template import fill
 from export.vectors import next_to
-from runtime_min.model import SealedModel, Term
+from runtime_min.model import INTEGERS, SealedModel, Term
 
 SMALLEST_NORMAL = {"binary32": 2.0**-126, "binary64": 2.0**-1022}
 SMALLEST = {"binary32": 2.0**-149, "binary64": 2.0**-1074}
@@ -19,6 +20,9 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
 
     Raises ReleaseError where the model's name is none that C takes.
     """
+    shared = {"guard": f"{sealed.name.upper()}_H", "crc": f"0x{self_test.crc:08X}UL"}
+    if sealed.arithmetic in INTEGERS:
+        return fill(PARTS, sealed, **integer_context(sealed, self_test), **shared, **_words_of(sealed))
     kind = sealed.arithmetic
     names = lexical.input_names(sealed)
     clamped = [entry.outside == "clamp" for entry in sealed.inputs]
@@ -27,7 +31,8 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     return fill(
         ("interface.h.jinja", "scoring.h.jinja", "self_test.h.jinja"),
         sealed,
-        guard=f"{sealed.name.upper()}_H",
+        **shared,
+        **_words_of(sealed),
         names=names,
         width=max(len(f"{sealed.name}_IN_{name},") for name in names),
         rules=[_rules(sealed.name.upper(), *flags) for flags in zip(clamped, typical, datum, strict=True)],
@@ -45,16 +50,28 @@ def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
             for term in sealed.terms
             for level in sealed.inputs[term.of[0]].levels or ("",)
         ],
-        table=lambda cells, labels=names: lexical.table(cells, labels),
-        levels_in_words=lambda entry: ", ".join(f"{rank} {level}" for rank, level in enumerate(entry.levels)),
         subnormal=[names[term.of[0]] for term in sealed.terms if can_be_subnormal(sealed, term)],
-        crc=f"0x{self_test.crc:08X}UL",
-        tests=[vector_words(vector, kind) for vector in self_test.vectors],
+        tests=[vector_words(vector, sealed) for vector in self_test.vectors],
     )
 
 
-def vector_words(vector: Vector, kind: str) -> list[str]:
-    """Inputs, log-odds and probability of one row as words of bits, then fault and decision, 16 bits each, in one."""
+def _words_of(sealed: SealedModel) -> dict[str, object]:
+    """How inputs and tables are put into words, in every arithmetic."""
+    names = lexical.input_names(sealed)
+    return {
+        "table": lambda cells, labels=names: lexical.table(cells, labels),
+        "levels_in_words": lambda entry: ", ".join(f"{rank} {level}" for rank, level in enumerate(entry.levels)),
+    }
+
+
+def vector_words(vector: Vector, sealed: SealedModel) -> list[str]:
+    """Inputs, log-odds and probability of one row as words of bits, then fault and decision, 16 bits each, in one.
+
+    In integers see `row_words`.
+    """
+    if sealed.arithmetic in INTEGERS:
+        return row_words(vector, sealed)
+    kind = sealed.arithmetic
     parts = [lexical.words(value, kind) for value in vector.inputs]
     parts += [lexical.words_of_bits(bits, kind) for bits in (*vector.expected.log_odds, *vector.expected.probability)]
     answers = vector.expected.fault | (vector.expected.decision & 0xFFFF) << 16

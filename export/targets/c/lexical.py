@@ -16,7 +16,7 @@ from fractions import Fraction
 from runtime_min.arithmetic import raw_bits
 from runtime_min.errors import Problem, ReleaseError
 from runtime_min.model import SealedModel
-from runtime_min.names import c_input_name, name_problem
+from runtime_min.names import c_position_name, name_problem
 from runtime_min.sealing import round_to
 
 LINE_WIDTH = 110
@@ -48,6 +48,11 @@ def decimal_text(value: float, arithmetic: str) -> str:
 def number(value: float, arithmetic: str) -> str:
     """The literal of a finite number of the arithmetic; never a hexadecimal one, which older C++ refuses."""
     return decimal_text(value, arithmetic) + SUFFIX[arithmetic]
+
+
+def integer(value: int, bits: int) -> str:
+    """The literal of a signed integer of so many bits. The least has none: C negates a number that is too large."""
+    return f"-{(1 << (bits - 1)) - 1} - 1" if value == -(1 << (bits - 1)) else str(value)
 
 
 def words(value: float, arithmetic: str) -> list[str]:
@@ -93,7 +98,7 @@ def table(cells: list[str], labels: list[str]) -> str:
 
 def input_names(sealed: SealedModel) -> list[str]:
     """The enumerator of each input after MODEL_IN_. No two are the same: a sealed model is valid only so."""
-    return [c_input_name(entry.name, entry.unit) for entry in sealed.inputs]
+    return [c_position_name(entry) for entry in sealed.inputs]
 
 
 def model_name(sealed: SealedModel) -> str:

@@ -17,8 +17,9 @@ from export.targets.c import ways
 from export.targets.c.template import fill
 from export.targets.c.ways import Way
 from export.targets.programs import run_program
-from runtime_min.arithmetic import ROUND, from_bits, raw_bits
-from runtime_min.model import SealedModel
+from runtime_min.arithmetic import ACCUMULATOR_BITS, ROUND, from_bits, raw_bits
+from runtime_min.integer_score import count_bits
+from runtime_min.model import INTEGERS, SealedModel
 
 INSTALL = "install a C compiler (Debian: apt-get install gcc g++; or pip install 'firmlogit[compiler]')"
 RUN_SECONDS = 30
@@ -27,8 +28,13 @@ PLAIN_WORDS = {"LC_ALL": "C"}  # a compiler speaks English in ASCII
 
 _HEAD = re.compile(r"([0-9a-zA-Z]{0,64}) (-?\d{1,9})")
 _ROW = {
-    arithmetic: re.compile(rf"(-?\d{{1,9}}) ([0-9a-f]{{{digits}}}) ([0-9a-f]{{{digits}}}) (-?\d{{1,9}})")
-    for arithmetic, digits in (("binary32", 8), ("binary64", 16))
+    arithmetic: re.compile(rf"(-?\d{{1,9}}) ([0-9a-f]{{{log_odds}}}) ([0-9a-f]{{{probability}}}) (-?\d{{1,9}})")
+    for arithmetic, log_odds, probability in (
+        ("binary32", 8, 8),
+        ("binary64", 16, 16),
+        ("int16", 8, 4),
+        ("int32", 16, 4),
+    )
 }
 
 
@@ -38,7 +44,7 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
     if not found:
         yield Run("C", False, f"found no C compiler; {INSTALL}", None, None, ())
         return
-    text = rows_as_bits(rows, sealed.arithmetic)
+    text = rows_as_bits(rows, sealed)
     for way in [way for compiler in found for way in ways.thorough(compiler)] if thorough else ways.quick(found[0]):
         yield run_one(way, artefact, sealed, text, len(rows))
 
@@ -74,10 +80,16 @@ def run_one(way: Way, artefact: Path, sealed: SealedModel, text: str, row_count:
     return _parsed(way.what, done.out.decode("utf-8", "replace"), sealed.arithmetic, row_count)
 
 
-def rows_as_bits(rows: Sequence[Sequence[float]], arithmetic: str) -> str:
-    """One row a line, each number's bits in hexadecimal; numbers are first rounded to the arithmetic."""
+def rows_as_bits(rows: Sequence[Sequence[float]], sealed: SealedModel) -> str:
+    """One row a line, each number's bits in hexadecimal; numbers are first rounded to the arithmetic.
+
+    In integers they are counts, in two's complement.
+    """
+    if sealed.arithmetic in INTEGERS:
+        digits, mask = count_bits(sealed) // 4, (1 << count_bits(sealed)) - 1
+        return "".join(" ".join(f"{int(value) & mask:0{digits}x}" for value in row) + "\n" for row in rows)
+    arithmetic, rounded = sealed.arithmetic, ROUND[sealed.arithmetic]
     digits = 8 if arithmetic == "binary32" else 16
-    rounded = ROUND[arithmetic]
     return "".join(
         " ".join(f"{raw_bits(rounded(float(value)), arithmetic):0{digits}x}" for value in row) + "\n" for row in rows
     )
@@ -86,7 +98,7 @@ def rows_as_bits(rows: Sequence[Sequence[float]], arithmetic: str) -> str:
 def _write_sources(folder: Path, artefact: Path, sealed: SealedModel, separate: bool) -> list[Path]:
     (folder / "artefact.h").write_bytes(artefact.read_bytes())
     driver = folder / "driver.c"
-    text = fill(("driver.c.jinja",), sealed, header="artefact.h")
+    text = _driver(sealed)
     if not separate:
         driver.write_bytes(text)
         return [driver]
@@ -95,6 +107,13 @@ def _write_sources(folder: Path, artefact: Path, sealed: SealedModel, separate: 
     code.write_text(f'#define {prefix}_SEPARATE\n#define {prefix}_CODE_HERE\n#include "artefact.h"\n')
     driver.write_bytes(f"#define {prefix}_SEPARATE\n".encode() + text)
     return [driver, code]
+
+
+def _driver(sealed: SealedModel) -> bytes:
+    if sealed.arithmetic not in INTEGERS:
+        return fill(("driver.c.jinja",), sealed, header="artefact.h")
+    widths = {"count_bits": count_bits(sealed), "sum_bits": ACCUMULATOR_BITS[sealed.arithmetic]}
+    return fill(("integer_driver.c.jinja",), sealed, header="artefact.h", **widths)
 
 
 def _parsed(what: str, text: str, arithmetic: str, row_count: int) -> Run:
@@ -115,6 +134,8 @@ def _parsed(what: str, text: str, arithmetic: str, row_count: int) -> Run:
 
 def _bits(text: str, arithmetic: str) -> int:
     """The printed bits, every NaN as the same one."""
+    if arithmetic in INTEGERS:
+        return int(text, 16)
     bits: int = raw_bits(from_bits(int(text, 16), arithmetic), arithmetic)
     return bits
 

@@ -1,8 +1,9 @@
 """Fill a template of this folder: C that reads like the file it makes.
 
 In a template `name_` and `NAME_` stand for the model's name, `real` for the type of a number, and `r` after a literal
-(`0.5r`) for its suffix; they are replaced in the template's own text, before any text of a model is put in. The rest
-is Jinja2.
+(`0.5r`) for its suffix; in integers `t_count` and `t_sum` for the types of inputs and of log-odds, `u_count` and
+`u_sum` for the same without a sign. They are replaced in the template's own text, before any text of a model is put in.
+The rest is Jinja2.
 """
 
 from __future__ import annotations
@@ -14,7 +15,9 @@ from pathlib import Path
 from jinja2 import Environment, StrictUndefined, Template
 
 from export.targets.c import lexical
-from runtime_min.model import SealedModel
+from runtime_min.arithmetic import ACCUMULATOR_BITS
+from runtime_min.integer_score import count_bits
+from runtime_min.model import INTEGERS, SealedModel
 
 HERE = Path(__file__).parent
 
@@ -26,17 +29,35 @@ def fill(parts: tuple[str, ...], sealed: SealedModel, **context: object) -> byte
     text = "".join((HERE / part).read_text(encoding="ascii") for part in parts)
     text = re.sub(r"\bNAME_", f"{name.upper()}_", text)
     text = re.sub(r"\bname_", f"{name}_", text)
-    text = re.sub(r"\breal\b", lexical.REAL[arithmetic], text)
-    text = re.sub(r"(?<=\d)r\b", lexical.SUFFIX[arithmetic], text)
+    for word, spelled in _types(sealed).items():
+        text = re.sub(word, spelled, text)
     filled = _template(text).render(
         model=sealed,
         name=name,
         double=arithmetic == "binary64",
-        number=lambda value: lexical.number(value, arithmetic),
-        decimal=lambda value: lexical.decimal_text(value, arithmetic),
+        number=lambda value: _number(value, arithmetic),
+        decimal=lambda value: str(value) if arithmetic in INTEGERS else lexical.decimal_text(value, arithmetic),
         **context,
     )
     return filled.encode("ascii")
+
+
+def _types(sealed: SealedModel) -> dict[str, str]:
+    """What stands for a type, as a pattern, and its name in C."""
+    if sealed.arithmetic not in INTEGERS:
+        return {r"\breal\b": lexical.REAL[sealed.arithmetic], r"(?<=\d)r\b": lexical.SUFFIX[sealed.arithmetic]}
+    widths = {"count": count_bits(sealed), "sum": ACCUMULATOR_BITS[sealed.arithmetic]}
+    return {
+        rf"\b{sign}_{what}\b": f"{c_name}{bits}_t"
+        for sign, c_name in (("t", "int"), ("u", "uint"))
+        for what, bits in widths.items()
+    }
+
+
+def _number(value: float, arithmetic: str) -> str:
+    if arithmetic in INTEGERS:
+        return lexical.integer(int(value), ACCUMULATOR_BITS[arithmetic])
+    return lexical.number(value, arithmetic)
 
 
 @lru_cache(maxsize=16)
