@@ -7,8 +7,15 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from export.parts import Part
-from export.parts.program import SpaceError, TroubleError, compile_program, folder_of, run_program
-from export.parts.run import FLAGS, SECONDS
+from export.parts.program import (
+    FLAGS,
+    SECONDS,
+    SpaceError,
+    TroubleError,
+    compile_program,
+    folder_of,
+    run_program,
+)
 from export.targets import TARGETS, Vector
 from export.targets.c.vectors_header import piece_count
 from runtime_min.model import SealedModel

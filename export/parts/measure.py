@@ -9,12 +9,20 @@ from __future__ import annotations
 
 import subprocess
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from export.parts import Part
-from export.parts.program import TYPES, compile_program, folder_of, program, row_bytes, run_program
-from export.parts.run import FLAGS, SECONDS
+from export.parts.program import (
+    FLAGS,
+    SECONDS,
+    compile_program,
+    folder_of,
+    program,
+    row_bytes,
+    run_program,
+    types_of,
+)
 from runtime_min.model import SealedModel
 
 FUNCTIONS = ("log_odds", "probability", "decide", "check_inputs")
@@ -41,61 +49,67 @@ class Measure:
 
 @dataclass(frozen=True)
 class Cost:
-    """What one program costs: bytes of program memory and of data memory, bytes of stack, count of each row."""
+    """What a program costs: bytes of program memory, of data memory and of stack, each row's count; and its answers.
+
+    An answer is the bits of what `call` returned, in hexadecimal digits.
+    """
 
     text: int
     data: int
     stack: int
     row_counts: tuple[int, ...]
+    answers: tuple[str, ...]
 
 
 def measure(part: Part, header: bytes, sealed: SealedModel, rows: Sequence[Sequence[float]]) -> tuple[Measure, ...]:
     """The cost of each function, over the first rows; they should be within the limits. Raises TroubleError."""
-    types = TYPES[sealed.arithmetic]
-    results = {"log_odds": types.log_odds, "probability": types.probability, "decide": "int", "check_inputs": "int"}
     found = []
     for function in FUNCTIONS:
-        of_type = results[function]
-        asked = f'#include "model.h"\n#include <stdint.h>\n{of_type} call(const {types.input} *inputs);\n' + (
-            f"{of_type} call(const {types.input} *inputs)\n{{\n    return {sealed.name}_{function}(inputs);\n}}\n"
-        )
-        cost = cost_beyond_none(part, {"model.h": header, "call.c": asked.encode()}, sealed, of_type, rows)
-        counts = cost.row_counts
-        found.append(
-            Measure(part.name, function, cost.text, cost.data, cost.stack, part.counts, min(counts), max(counts))
-        )
+        cost = cost_of(part, {"model.h": header, "call.c": call_of(sealed, function)}, sealed, function, rows)
+        least, most = min(cost.row_counts), max(cost.row_counts)
+        found.append(Measure(part.name, function, cost.text, cost.data, cost.stack, part.counts, least, most))
     return tuple(found)
 
 
-def cost_beyond_none(
-    part: Part, sources: dict[str, bytes], sealed: SealedModel, result: str, rows: Sequence[Sequence[float]]
+def result_type(sealed: SealedModel, function: str) -> str:
+    """What a function of the header returns, in C."""
+    types = types_of(sealed)
+    return {"log_odds": types.log_odds, "probability": types.probability}.get(function, "int")
+
+
+def call_of(sealed: SealedModel, function: str) -> bytes:
+    """A C file whose `call` is a function of the header, model.h."""
+    return _call(sealed, function, '#include "model.h"\n', f"{sealed.name}_{function}(inputs)")
+
+
+def cost_of(
+    part: Part, sources: dict[str, bytes], sealed: SealedModel, function: str, rows: Sequence[Sequence[float]]
 ) -> Cost:
-    """The cost of `call` in these sources, beyond that of one that returns 0. The stack is that of the call itself."""
-    types = TYPES[sealed.arithmetic]
-    none = f"#include <stdint.h>\n{result} call(const {types.input} *inputs);\n" + (
-        f"{result} call(const {types.input} *inputs)\n{{\n    (void)inputs;\n    return 0;\n}}\n"
-    )
-    with_it = _cost(part, sources, sealed, result, rows)
-    without = _cost(part, {"call.c": none.encode()}, sealed, result, rows)
-    counts = zip(with_it.row_counts, without.row_counts, strict=True)
-    return Cost(
-        with_it.text - without.text,
-        with_it.data - without.data,
-        with_it.stack,
-        tuple(one - none for one, none in counts),
-    )
+    """The cost of `call` in these sources beyond that of one that returns 0; the stack is that of the call itself."""
+    with_it = _cost(part, sources, sealed, function, rows)
+    without = _cost(part, {"call.c": _call(sealed, function, "", "(void)inputs, 0")}, sealed, function, rows)
+    counts = tuple(one - other for one, other in zip(with_it.row_counts, without.row_counts, strict=True))
+    return replace(with_it, text=with_it.text - without.text, data=with_it.data - without.data, row_counts=counts)
+
+
+def _call(sealed: SealedModel, function: str, include: str, result: str) -> bytes:
+    prototype = f"{result_type(sealed, function)} call(const {types_of(sealed).input} *inputs)"
+    return f"{include}#include <stdint.h>\n{prototype};\n{prototype}\n{{\n    return {result};\n}}\n".encode()
 
 
 def _cost(
-    part: Part, sources: dict[str, bytes], sealed: SealedModel, result: str, rows: Sequence[Sequence[float]]
+    part: Part, sources: dict[str, bytes], sealed: SealedModel, function: str, rows: Sequence[Sequence[float]]
 ) -> Cost:
-    texts = [row_bytes(row, sealed.arithmetic) for row in rows[:ROWS]]
+    texts = [row_bytes(row, sealed) for row in rows[:ROWS]]
+    result = result_type(sealed, function)
     main = program("measure.c.jinja", sealed, rows=texts, count=len(texts), result=result, painted=PAINTED)
     with folder_of(part, {**sources, "measure.c": main}) as folder:
         compile_program(part, folder, FLAGS)
         text, data = _sizes(part, folder)
-        stack, *ticks = (int(line, 16) for line in run_program(part, folder, SECONDS, counted=True))
-    return Cost(text, data, stack, tuple(part.chain.counted(part, tick) for tick in ticks))
+        stack, *lines = run_program(part, folder, SECONDS, counted=True)
+    pairs = [line.split(" ") for line in lines]
+    counts = tuple(part.chain.counted(part, int(ticks, 16)) for ticks, _ in pairs)
+    return Cost(text, data, int(stack, 16), counts, tuple(answer for _, answer in pairs))
 
 
 def _sizes(part: Part, folder: Path) -> tuple[int, int]:

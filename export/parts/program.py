@@ -11,10 +11,13 @@ from tempfile import TemporaryDirectory
 
 from export.parts import HERE, Part
 from export.targets.c.template import fill
-from runtime_min.arithmetic import ROUND, raw_bits
+from runtime_min.arithmetic import ACCUMULATOR_BITS, ROUND, raw_bits
+from runtime_min.integer_score import count_bits, missing_count
 from runtime_min.model import FLOATS, SealedModel
 
-COMPILE_SECONDS = 60
+# As firmware is compiled, in the dialect that the compiler takes where nothing is said: it may fuse products and sums.
+FLAGS = ("-std=gnu99", "-Os")
+SECONDS = 60
 SHOWN_LINES = 3
 END = "end"
 
@@ -29,12 +32,13 @@ class Types:
     digits: tuple[int, int, int]
 
 
-TYPES = {
-    "binary32": Types("float", "float", "float", (8, 8, 8)),
-    "binary64": Types("double", "double", "double", (16, 16, 16)),
-    "int16": Types("int16_t", "int32_t", "uint16_t", (4, 8, 4)),
-    "int32": Types("int32_t", "int64_t", "uint16_t", (8, 16, 4)),
-}
+def types_of(sealed: SealedModel) -> Types:
+    """The types that the model's header has."""
+    if sealed.arithmetic in FLOATS:
+        real, digits = {"binary32": ("float", 8), "binary64": ("double", 16)}[sealed.arithmetic]
+        return Types(real, real, real, (digits, digits, digits))
+    bits, wide = count_bits(sealed), ACCUMULATOR_BITS[sealed.arithmetic]
+    return Types(f"int{bits}_t", f"int{wide}_t", "uint16_t", (bits // 4, wide // 4, 4))
 
 
 class TroubleError(Exception):
@@ -62,7 +66,7 @@ def compile_program(part: Part, folder: Path, flags: Sequence[str]) -> None:
     Raises SpaceError where it does not fit, TroubleError with the compiler's first words where something else is wrong.
     """
     sources = sorted(path.name for path in folder.iterdir() if path.suffix == ".c")
-    done = _ran(part.chain.compile_command(part, flags, sources), folder, COMPILE_SECONDS, "the compiler")
+    done = _ran(part.chain.compile_command(part, flags, sources), folder, SECONDS, "the compiler")
     if done.returncode != 0:
         if " overflowed by " in done.stderr:
             raise SpaceError(f"it does not fit into {part.rom} bytes of program memory and {part.ram} of data memory")
@@ -87,18 +91,20 @@ def run_program(part: Part, folder: Path, seconds: float, *, counted: bool = Fal
 
 def program(template: str, part_sealed: SealedModel, **context: object) -> bytes:
     """The C file that a template of this folder makes of a model."""
-    return fill((str(HERE / template),), part_sealed, types=TYPES[part_sealed.arithmetic], header="model.h", **context)
+    return fill((str(HERE / template),), part_sealed, types=types_of(part_sealed), header="model.h", **context)
 
 
-def row_bytes(row: Sequence[float], arithmetic: str) -> str:
+def row_bytes(row: Sequence[float], sealed: SealedModel) -> str:
     """The bits of a row's inputs, rounded to the arithmetic, as C lists bytes: the least significant first."""
-    size = TYPES[arithmetic].digits[0] // 2
-    words = (_bits(value, arithmetic) % 256**size for value in row)
+    size = types_of(sealed).digits[0] // 2
+    words = (_bits(value, sealed) % 256**size for value in row)
     return ", ".join(f"0x{byte:02x}" for word in words for byte in word.to_bytes(size, "little"))
 
 
-def _bits(value: float, arithmetic: str) -> int:
-    return raw_bits(ROUND[arithmetic](float(value)), arithmetic) if arithmetic in FLOATS else int(value)
+def _bits(value: float, sealed: SealedModel) -> int:
+    if sealed.arithmetic in FLOATS:
+        return raw_bits(ROUND[sealed.arithmetic](float(value)), sealed.arithmetic)
+    return missing_count(sealed) if value != value else int(value)
 
 
 def _ran(command: Sequence[str], folder: Path, seconds: float, what: str) -> subprocess.CompletedProcess[str]:

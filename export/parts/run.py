@@ -8,7 +8,8 @@ from pathlib import Path
 
 from export.parts import Part
 from export.parts.program import (
-    TYPES,
+    FLAGS,
+    SECONDS,
     SpaceError,
     TroubleError,
     compile_program,
@@ -16,17 +17,15 @@ from export.parts.program import (
     program,
     row_bytes,
     run_program,
+    types_of,
 )
 from export.targets import Output, Run
 from export.targets.c.ways import STRICT
 from runtime_min.arithmetic import from_bits, raw_bits
-from runtime_min.model import FLOATS, SealedModel
+from runtime_min.model import SealedModel
 
-# The dialect that the compiler takes where nothing is said: it may fuse products and sums.
-FLAGS = ("-std=gnu99", "-Os")
 MORE_FLAGS = (("-std=c99", "-O1"), ("-std=gnu99", "-O2", "-ffp-contract=fast"))
 MOST_ROW_BYTES = 32_000  # no more than one array takes on the smallest parts
-SECONDS = 60
 
 
 def run_part(
@@ -58,8 +57,9 @@ def _run_way(
 ) -> Run:
     model_id, self_test = "", 0
     outputs: list[Output] = []
-    texts = [row_bytes(row, sealed.arithmetic) for row in rows]
-    batch = max(1, min(part.rom // 2, MOST_ROW_BYTES) // (len(sealed.inputs) * TYPES[sealed.arithmetic].digits[0] // 2))
+    texts = [row_bytes(row, sealed) for row in rows]
+    size = len(sealed.inputs) * types_of(sealed).digits[0] // 2
+    batch = max(1, min(part.rom // 2, MOST_ROW_BYTES) // size)
     while len(outputs) < len(rows):
         some = texts[len(outputs) : len(outputs) + batch]
         try:
@@ -83,18 +83,17 @@ def _batch(
         compile_program(part, folder, (*flags, *STRICT))
         lines = run_program(part, folder, SECONDS)
     head = re.fullmatch(r"([0-9a-zA-Z]{0,64}) (-?\d{1,5})", lines[0]) if lines else None
-    found = [_output(line, sealed.arithmetic) for line in lines[1:]]
+    found = [_output(line, sealed) for line in lines[1:]]
     if head is None or len(found) != len(texts):
         raise TroubleError(f"expected {len(texts)} rows of output, found {len(found)}")
     return head, found
 
 
-def _output(line: str, arithmetic: str) -> Output:
-    _, log_odds, probability = TYPES[arithmetic].digits
+def _output(line: str, sealed: SealedModel) -> Output:
+    _, log_odds, probability = types_of(sealed).digits
     match = re.fullmatch(rf"(-?\d+) ([0-9a-f]{{{log_odds}}}) ([0-9a-f]{{{probability}}}) (-?\d+)", line)
     if match is None:
         raise TroubleError(f'expected a row of output, found "{line[:60]}"')
-    z, p = int(match[2], 16), int(match[3], 16)
-    if arithmetic in FLOATS:  # every NaN as the same one
-        z, p = (raw_bits(from_bits(bits, arithmetic), arithmetic) for bits in (z, p))
+    # Every NaN as the same one.
+    z, p = (raw_bits(from_bits(int(bits, 16), sealed.arithmetic), sealed.arithmetic) for bits in match.group(2, 3))
     return Output(int(match[1]), (z,), (p,), int(match[4]))
