@@ -283,13 +283,16 @@ def _fitted(path: Path, progress: Callable[[str], None]) -> tuple[Plan, TrainedM
 def _fit_check(plan: Plan, trained: TrainedModel, sealed: SealedModel) -> Check:
     """The fit against its own optimality condition, recomputed from the file."""
     from export.check import Check
-    from export.optimality import Source, recheck_fit
+    from export.optimality import AskedPrior, AskedTerm, Source, recheck_fit
     from trainer.sources import row_files
 
     rows = plan.rows
     files = row_files(rows.file, plan.path.parent)
     source = Source(files, rows.label, rows.held_out, rows.seed, rows.weight, rows.group)
-    found = recheck_fit(trained, sealed.about.request, source)
+    prior = plan.prior
+    terms = tuple(AskedTerm(t.name, t.mean, t.sd, t.method == "shared", t.per == "unit") for t in prior.terms)
+    asked = AskedPrior(prior.method, prior.sd, prior.intercept_sd, terms, plan.decision.prevalence)
+    found = recheck_fit(trained, sealed.about.request, source, asked)
     held = f"{found.rows:,} rows, within {found.step:.1e} posterior sd"
     sentence = "; ".join(found.problems) or held
     name, wrong = f"{plan.model}.trained.json", len(found.problems)

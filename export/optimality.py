@@ -14,6 +14,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from fractions import Fraction
 from typing import Any
 
 import numpy as np
@@ -22,7 +23,7 @@ import numpy.typing as npt
 from export.raw_rows import RawRows, Source, raw_rows
 from runtime_min.model import Request, TrainedModel
 
-__all__ = ["Optimality", "Source", "recheck_fit"]
+__all__ = ["AskedPrior", "AskedTerm", "Optimality", "Source", "recheck_fit"]
 
 # What the stored weights may be from the optimum: their grid of 2^-30, and 1e-6 posterior sd for this computation.
 GRID = 2.0**-30
@@ -33,6 +34,28 @@ STANDARDISATION_SHARE = 2.0**-39
 LOSS_STEP = 1e-11
 
 LongDoubles = npt.NDArray[np.longdouble]
+
+
+@dataclass(frozen=True)
+class AskedTerm:
+    """What the plan says of one weight's prior; an sd of None is flat. shared: the sd is that of all such weights."""
+
+    name: str
+    mean: Fraction = Fraction(0)
+    sd: Fraction | None = None
+    shared: bool = True
+    per_unit: bool = False
+
+
+@dataclass(frozen=True)
+class AskedPrior:
+    """What the plan says of the prior (method "fixed", with sd, or another, which chooses it) and of the prevalence."""
+
+    method: str
+    sd: Fraction | None
+    intercept_sd: Fraction | None
+    terms: tuple[AskedTerm, ...] = ()
+    prevalence: Fraction | None = None
 
 
 @dataclass(frozen=True)
@@ -47,12 +70,17 @@ class Optimality:
     rows: int
 
 
-def recheck_fit(trained: TrainedModel, request: Request, source: Source) -> Optimality:
-    """Recompute from the files: the split, centres, scales, class sums, and the Newton step at the stored weights."""
+def recheck_fit(
+    trained: TrainedModel, request: Request, source: Source, asked: AskedPrior | None = None
+) -> Optimality:
+    """Recompute from the files: the split, centres, scales, class sums, and the Newton step at the stored weights.
+
+    asked: what the plan says of the prior and the field, held against what the trained model has; None to leave it.
+    """
     rows = raw_rows(trained, request, source)
     fitted = ~rows.held_out
     values, labels, weights = rows.values[fitted], rows.labels[fitted], rows.weights[fitted]
-    problems = [*_counts(trained, rows), *_choice(trained)]
+    problems = [*_counts(trained, rows), *_choice(trained), *(_prior(trained, asked) if asked else ())]
     sums = tuple(math.fsum(weights[labels == k]) for k in range(len(trained.classes)))
     if sums != trained.class_weights:
         problems.append(f"the fitted rows weigh {sums} a class, the trained model says {trained.class_weights}")
@@ -100,6 +128,24 @@ def _choice(trained: TrainedModel) -> Iterator[str]:
         yield f"the prior's sd {choice.sd:g} has not the lowest log loss of those tried"
     if choice.sd not in trained.prior.sds:
         yield f"the prior's sd {choice.sd:g} was chosen and is that of no weight"
+
+
+def _prior(trained: TrainedModel, asked: AskedPrior) -> Iterator[str]:
+    """The prior's means and sds, of standardised weights: those per unit of an input are times its scale."""
+    own = {term.name: term for term in asked.terms}
+    shared = asked.sd
+    if asked.method != "fixed" and trained.choice is not None:
+        shared = Fraction(str(trained.choice.sd))
+    for term, mean, sd in zip(trained.terms, trained.prior.means, trained.prior.sds, strict=True):
+        entry = own.get(term.name, AskedTerm(term.name))
+        factor = Fraction(term.scale) if entry.per_unit else Fraction(1)
+        wanted = shared if entry.shared else entry.sd
+        if (float(entry.mean * factor), None if wanted is None else float(wanted * factor)) != (mean, sd):
+            yield f'the prior of "{term.name}" is not the one that the plan asks for'
+    if (None if asked.intercept_sd is None else float(asked.intercept_sd)) != trained.prior.intercept_sd:
+        yield "the prior of the intercept is not the one that the plan asks for"
+    if asked.prevalence != (None if trained.prevalence is None else Fraction(trained.prevalence)):
+        yield f"the plan states the prevalence {asked.prevalence}, the trained model {trained.prevalence}"
 
 
 def _moments(column: LongDoubles, weights: npt.NDArray[np.float64]) -> tuple[np.longdouble, np.longdouble]:

@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from export.optimality import Optimality, Source, recheck_fit
+from export.optimality import AskedPrior, AskedTerm, Optimality, Source, recheck_fit
 from runtime_min.model import Request, TrainedModel
 from trainer.fit import fit_plan
 from trainer.plan import Plan, read_plan
@@ -89,7 +89,11 @@ def fitted(
 def recheck(plan: Plan, trained: TrainedModel, request: Request) -> Optimality:
     rows = plan.rows
     files = row_files(rows.file, plan.path.parent)
-    return recheck_fit(trained, request, Source(files, rows.label, rows.held_out, rows.seed, rows.weight, rows.group))
+    source = Source(files, rows.label, rows.held_out, rows.seed, rows.weight, rows.group)
+    prior = plan.prior
+    terms = tuple(AskedTerm(t.name, t.mean, t.sd, t.method == "shared", t.per == "unit") for t in prior.terms)
+    asked = AskedPrior(prior.method, prior.sd, prior.intercept_sd, terms, plan.decision.prevalence)
+    return recheck_fit(trained, request, source, asked)
 
 
 PLANS = {
@@ -101,6 +105,7 @@ PLANS = {
     "weights and groups": ('weight = "hours"\ngroup = "pump"', "sd = 1.0"),
     "priors of terms": ('weight = "hours"', 'sd = 1.0\n[prior.term.flow]\nmean = 0.5\nsd = 0.25\nper = "unit"'),
     "a chosen strength": ('group = "pump"', 'sd = "cross-validation"'),
+    "a prevalence": ("", "sd = 1.0\n[decision]\nprevalence = 0.02"),
 }
 
 
@@ -199,6 +204,24 @@ def test_fit_that_left_out_what_the_plan_asks_is_found(asked: str, done: str, to
     (tmp_path / "done").mkdir()
     _, trained, _ = fitted(tmp_path / "done", done)
     plan, _, request = fitted(tmp_path, asked)
+    assert told in "; ".join(recheck(plan, trained, request).problems)
+
+
+@pytest.mark.parametrize(
+    ("asked", "told"),
+    [
+        ("sd = 2.0", 'the prior of "current"'),
+        ("sd = 1.0\nintercept_sd = 3.0", "the prior of the intercept"),
+        ('sd = 1.0\n[prior.term.flow]\nmean = 0.5', 'the prior of "flow"'),
+        ('sd = 1.0\n[prior.term.flow]\nsd = 1.0\nper = "unit"', 'the prior of "flow"'),
+        ('sd = 1.0\n[prior.term."impeller=open"]\nsd = 0.5', 'the prior of "impeller=open"'),
+        ("sd = 1.0\n[decision]\nprevalence = 0.02", "the plan states the prevalence 1/50, the trained model None"),
+    ],
+)
+def test_prior_or_prevalence_other_than_the_plan_is_found(asked: str, told: str, tmp_path: Path) -> None:
+    (tmp_path / "done").mkdir()
+    _, trained, _ = fitted(tmp_path / "done", "")
+    plan, _, request = fitted(tmp_path, "", asked)
     assert told in "; ".join(recheck(plan, trained, request).problems)
 
 
