@@ -113,9 +113,9 @@ class Target:
 TARGETS = {
     target.name: target
     for target in (
-        Target("python", ".py", ("binary64", "binary32")),
+        Target("python", ".py", ("binary64", "binary32", "int16", "int32")),
         Target("c", ".h", ("binary64", "binary32", "int16", "int32")),
-        Target("onnx", ".onnx", ("binary64", "binary32")),
+        Target("onnx", ".onnx", ("binary64", "binary32", "int16", "int32")),
         Target("table", "_table.h", ("binary64", "binary32", "int16", "int32")),
     )
 }

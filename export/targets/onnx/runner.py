@@ -28,7 +28,13 @@ from runtime_min.arithmetic import raw_bits
 from runtime_min.model import SealedModel
 
 TIME_LIMIT = 120.0  # seconds, of all ways together
-ELEMENT = {"binary32": "<f4", "binary64": "<f8"}
+# Inputs, log_odds and probability.
+ELEMENTS = {
+    "binary32": ("<f4", "<f4", "<f4"),
+    "binary64": ("<f8", "<f8", "<f8"),
+    "int16": ("<i4", "<i4", "<i4"),
+    "int32": ("<i4", "<i8", "<i4"),
+}
 DOES_NOT_SAY = -1  # Output.fault: the graph has no check_inputs
 
 
@@ -68,14 +74,14 @@ def run(artefact: Path, sealed: SealedModel, rows: Sequence[Sequence[float]], th
         yield Run("onnx.checker", True, short(str(error)) or type(error).__name__, None, None, ())
         return
     code = None if _numbers(graph) == _numbers(model(sealed)) else SELF_TEST_TABLES
-    element = ELEMENT[sealed.arithmetic]
+    kinds = ELEMENTS[sealed.arithmetic]
     with np.errstate(over="ignore"):
-        table = np.array(rows, dtype=element).reshape(len(rows), len(sealed.inputs))
+        table = np.array(rows, dtype=kinds[0]).reshape(len(rows), len(sealed.inputs))
     ways = THOROUGH if thorough else QUICK
     asked = {
         "path": sys.path,
         "model": str(artefact),
-        "element": element,
+        "kinds": [*kinds, "<i8"],
         "shape": table.shape,
         "rows": table.tobytes().hex(),
         "ways": [asdict(way) for way in ways],
@@ -104,14 +110,17 @@ def _read(what: str, sealed: SealedModel, said: dict[str, Any], count: int, code
     what = f"{what}, {said['version']}"
     if said["trouble"] is not None:
         return Run(what, True, said["trouble"], said["model_id"], None, ())
-    element = ELEMENT[sealed.arithmetic]
-    log_odds, probability = (np.frombuffer(bytes.fromhex(said[name]), element) for name in ("log_odds", "probability"))
+    _, *kinds = ELEMENTS[sealed.arithmetic]
+    log_odds, probability = (
+        np.frombuffer(bytes.fromhex(said[name]), kind).tolist()
+        for name, kind in zip(("log_odds", "probability"), kinds, strict=True)
+    )
     decision = np.frombuffer(bytes.fromhex(said["decision"]), "<i8")
     outputs = tuple(
         Output(
             DOES_NOT_SAY,
-            (raw_bits(float(log_odds[row]), sealed.arithmetic),),
-            (raw_bits(float(probability[row]), sealed.arithmetic),),
+            (raw_bits(log_odds[row], sealed.arithmetic),),
+            (raw_bits(probability[row], sealed.arithmetic),),
             int(decision[row]),
         )
         for row in range(count)

@@ -14,14 +14,15 @@ def main() -> None:
     import numpy as np
     import onnxruntime
 
-    rows = np.frombuffer(bytes.fromhex(asked["rows"]), asked["element"]).reshape(asked["shape"])
+    kind, *kinds = asked["kinds"]
+    rows = np.frombuffer(bytes.fromhex(asked["rows"]), kind).reshape(asked["shape"])
     version = f"onnxruntime {onnxruntime.__version__}"
     for way in asked["ways"]:
         said: dict[str, Any] = {"version": version, "model_id": None, "trouble": None}
         try:
             session = open_session(onnxruntime, asked["model"], way)
             said["model_id"] = session.get_modelmeta().custom_metadata_map.get("model_id")
-            results = score(session, rows, way["one_at_a_time"])
+            results = score(session, rows, kinds, way["one_at_a_time"])
             for name, result in zip(OUTPUTS, results, strict=True):
                 said[name] = result.tobytes().hex()
         except Exception as error:  # whatever the runtime raises is the finding
@@ -43,22 +44,22 @@ def open_session(onnxruntime: Any, model: str, way: dict[str, Any]) -> Any:
     return onnxruntime.InferenceSession(model, options, providers=["CPUExecutionProvider"])
 
 
-def score(session: Any, rows: Any, one_at_a_time: bool) -> list[Any]:
+def score(session: Any, rows: Any, kinds: list[str], one_at_a_time: bool) -> list[Any]:
     """The three outputs of all rows. Raises ValueError where a batch of none or of one is not what it should be."""
     import numpy as np
 
     for part in (rows[:0], rows[:1]):
-        answer(session, part)
+        answer(session, part, kinds)
     if not one_at_a_time or not len(rows):
-        return answer(session, rows)
-    pieces = [answer(session, rows[at : at + 1]) for at in range(len(rows))]
+        return answer(session, rows, kinds)
+    pieces = [answer(session, rows[at : at + 1], kinds) for at in range(len(rows))]
     return [np.concatenate(column) for column in zip(*pieces, strict=True)]
 
 
-def answer(session: Any, rows: Any) -> list[Any]:
+def answer(session: Any, rows: Any, kinds: list[str]) -> list[Any]:
     """log_odds, probability and decision of one batch, of the right types and lengths."""
     results: list[Any] = session.run(list(OUTPUTS), {"inputs": rows})
-    for name, result, kind in zip(OUTPUTS, results, (rows.dtype, rows.dtype, "int64"), strict=True):
+    for name, result, kind in zip(OUTPUTS, results, kinds, strict=True):
         if result.dtype != kind or result.shape != (len(rows),):
             raise ValueError(f"{name} of {len(rows)} rows is {result.dtype}{list(result.shape)}")
     return results

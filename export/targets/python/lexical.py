@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
+from fractions import Fraction
 
 LINE_LENGTH = 100
 INLINE_LENGTH = 70  # what is longer gets lines of its own
@@ -21,6 +22,18 @@ def number(value: float) -> str:
     if not math.isfinite(value):
         raise ValueError(f"no literal stands for {value}")
     return repr(float(value))
+
+
+def integer(value: float) -> str:
+    """A whole number in decimal. Raises ValueError for any other: in integers every device number is whole."""
+    if value != int(value):
+        raise ValueError(f"no whole number is {value}")
+    return str(int(value))
+
+
+def pair(value: Fraction) -> str:
+    """A rational as a tuple of its numerator and denominator."""
+    return f"({value.numerator}, {value.denominator})"
 
 
 def value(x: float) -> str:
