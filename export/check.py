@@ -28,6 +28,7 @@ from export.parts.program import TroubleError
 from export.parts.run import run_part
 from export.targets import TARGETS, Run, Vector
 from export.targets.c.own_compiler import compile_own
+from export.thresholds import wrong_thresholds
 from export.vector_files import read_vectors
 from export.witness import witness_misses
 from runtime_min.codec import load, load_trained, sealed_text
@@ -290,9 +291,10 @@ def _budget(
         return [_judged(name, "error budget", 1, str(error.problems[0]))], None, None
     tolerance = sealed.about.request.tolerance
     over = tolerance is not None and not budget.log_odds <= Fraction(tolerance)
+    decided = wrong_thresholds(sealed)
     bound = f"{float(budget.log_odds):.3g}"
     allowed = f"tolerance {float(Fraction(tolerance)):.3g}" if tolerance is not None else "no tolerance stated"
-    checks = [_judged(name, "error budget", int(over), f"{bound}, {allowed}")]
+    checks = [_judged(name, "error budget", int(over) + int(bool(decided)), decided or f"{bound}, {allowed}")]
     found = attack(trained, sealed, budget, int(sealed.model_id, 16), "thorough" if thorough else "quick")
     broken = not found.share <= 1
     tried = f"all {found.tried:,} rows that there are" if found.everything else f"{found.tried:,} rows"

@@ -21,6 +21,7 @@ import numpy as np
 import numpy.typing as npt
 
 from export.raw_rows import RawRows, Source, raw_rows
+from export.results import wrong_results
 from runtime_min.model import Request, TrainedModel
 
 __all__ = ["AskedPrior", "AskedTerm", "Optimality", "Source", "recheck_fit"]
@@ -32,6 +33,8 @@ POSTERIOR_SD_SHARE = 1e-6
 STANDARDISATION_SHARE = 2.0**-39
 # Of the curve of log losses, what is lower by less is as low.
 LOSS_STEP = 1e-11
+# Of a covariance, relative to the two posterior sds: what two inversions may differ by.
+COVARIANCE_SHARE = 1e-6
 
 LongDoubles = npt.NDArray[np.longdouble]
 
@@ -73,7 +76,7 @@ class Optimality:
 def recheck_fit(
     trained: TrainedModel, request: Request, source: Source, asked: AskedPrior | None = None
 ) -> Optimality:
-    """Recompute from the files: the split, centres, scales, class sums, and the Newton step at the stored weights.
+    """Recompute from the files: split, centres, scales, class sums, Newton step at the stored weights, results.
 
     asked: what the plan says of the prior and the field, held against what the trained model has; None to leave it.
     """
@@ -100,6 +103,7 @@ def recheck_fit(
             )
         columns[:, j] = (column - centre) / scale
     step, off = _newton_step(trained, columns, labels, weights)
+    problems += wrong_results(trained, rows)
     return Optimality((*problems, *off), step, len(values))
 
 
@@ -179,6 +183,9 @@ def _newton_step(
         for j in range(len(step))
         if not abs(step[j]) <= GRID + POSTERIOR_SD_SHARE * spread[j]
     ]
+    stated = np.array(trained.covariance) / np.outer(spread, spread)
+    if not np.max(np.abs(stated - np.linalg.inv(hessian) / np.outer(spread, spread))) <= COVARIANCE_SHARE:
+        problems.append("the covariance of the weights is not that of their posterior on these rows")
     return float(np.max(np.abs(step) / spread)), problems
 
 
