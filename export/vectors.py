@@ -85,8 +85,8 @@ def random_row(sealed: SealedModel, rng: random.Random) -> Row:
         return tuple(rng.randint(int(entry.low), int(entry.high)) for entry in sealed.inputs)
     rounded = arithmetic.ROUND[sealed.arithmetic]
     return tuple(
-        float(rng.randrange(len(entry.levels)))
-        if entry.levels
+        float(rng.randint(int(entry.low), int(entry.high)))
+        if entry.levels or entry.counts
         else min(max(rounded(entry.low + (entry.high - entry.low) * rng.random()), entry.low), entry.high)
         for entry in sealed.inputs
     )
