@@ -1,7 +1,7 @@
 /* binary32 by hand: as little C as does the job with the same bits. */
 #include "floor.h"
 
-static const float low[INPUTS] TABLE = LOW, high[INPUTS] TABLE = HIGH, weight[INPUTS] TABLE = WEIGHT;
+static const TABLE float low[INPUTS] = LOW, high[INPUTS] = HIGH, weight[INPUTS] = WEIGHT;
 
 static inline float rounded(float product)
 {
@@ -16,10 +16,10 @@ static inline float sum(const float *x)
     float z = INTERCEPT;
     int i;
     for (i = 0; i < INPUTS; i++) {
-        if (!(x[i] >= READ_REAL(low[i]) && x[i] <= READ_REAL(high[i]))) {
+        if (!(x[i] >= low[i] && x[i] <= high[i])) {
             return __builtin_nanf("");
         }
-        z += rounded(READ_REAL(weight[i]) * x[i]);
+        z += rounded(weight[i] * x[i]);
     }
     return z;
 }
@@ -42,14 +42,14 @@ RESULT call(const float *x)
 {
     int i;
     for (i = 0; i < INPUTS; i++) {
-        if (!(x[i] >= READ_REAL(low[i]) && x[i] <= READ_REAL(high[i]))) {
+        if (!(x[i] >= low[i] && x[i] <= high[i])) {
             return i + 1;
         }
     }
     return 0;
 }
 #else
-static const float coefficient[DEGREE + 1] TABLE = COEFFICIENT;
+static const TABLE float coefficient[DEGREE + 1] = COEFFICIENT;
 
 RESULT call(const float *x)
 {
@@ -66,9 +66,9 @@ RESULT call(const float *x)
     if (t >= FLOOR) {
         k = (rounded(t * INV_LN2) + 12582912.0f) - 12582912.0f;
         r = (t - rounded(k * LN2_HIGH)) - rounded(k * LN2_LOW);
-        e = READ_REAL(coefficient[DEGREE]);
+        e = coefficient[DEGREE];
         for (n = DEGREE - 1; n >= 0; n--) {
-            e = rounded(e * r) + READ_REAL(coefficient[n]);
+            e = rounded(e * r) + coefficient[n];
         }
         __builtin_memcpy(&bits, &e, 4); /* times 2^k; e is normal and stays so */
         bits += (uint32_t)(int)k << 23;

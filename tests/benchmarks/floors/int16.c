@@ -1,20 +1,24 @@
 /* int16 by hand: as little C as does the job with the same bits. */
 #include "floor.h"
 
-static const int16_t low[INPUTS] TABLE = LOW, high[INPUTS] TABLE = HIGH, datum[INPUTS] TABLE = DATUM;
-static const int16_t weight[INPUTS] TABLE = WEIGHT;
-static const uint8_t shift[INPUTS] TABLE = SHIFT;
+/* Of each input: low, high, datum, weight, shift. */
+static const TABLE int16_t table[INPUTS * 5] = ROWS;
 
 /* The accumulator; its least number on a fault. */
 static inline int32_t sum(const int16_t *x)
 {
+    const TABLE int16_t *row = table;
     int32_t z = INTERCEPT;
     int i;
     for (i = 0; i < INPUTS; i++) {
-        if (x[i] < READ_16(low[i]) || x[i] > READ_16(high[i])) {
+        int16_t n = x[i];
+        int32_t product;
+        if (x[i] < *row++ || x[i] > *row++) {
             return INT32_MIN;
         }
-        z += (READ_16(weight[i]) * ((int32_t)x[i] - READ_16(datum[i]))) << READ_8(shift[i]);
+        n -= *row++;
+        product = (int32_t)n * *row++;
+        z += product << *row++;
     }
     return z;
 }
@@ -35,32 +39,33 @@ RESULT call(const int16_t *x)
 #elif defined(CHECK_INPUTS)
 RESULT call(const int16_t *x)
 {
+    static const TABLE int16_t low[INPUTS] = LOW, high[INPUTS] = HIGH;
     int i;
     for (i = 0; i < INPUTS; i++) {
-        if (x[i] < READ_16(low[i]) || x[i] > READ_16(high[i])) {
+        if (x[i] < low[i] || x[i] > high[i]) {
             return i + 1;
         }
     }
     return 0;
 }
 #else
-static const uint16_t node[NODES] TABLE = NODE;
+static const TABLE uint16_t node[NODES] = NODE;
 
 RESULT call(const int16_t *x)
 {
     const int32_t z = sum(x);
-    uint32_t a, i;
-    int32_t q;
+    uint32_t a;
+    uint16_t q;
     if (z == INT32_MIN) {
         return 0xFFFF;
     }
     a = (uint32_t)(z < 0 ? -z : z) >> DROP;
-    i = a >> STEP;
-    q = READ_U16(node[NODES - 1]);
-    if (i < NODES - 1) {
-        q = READ_U16(node[i]);
-        q += (int32_t)((READ_U16(node[i + 1]) - q) * (int32_t)(a & ((1UL << STEP) - 1)) + (1L << (STEP - 1))) >> STEP;
+    q = node[NODES - 1];
+    if (a < (uint32_t)(NODES - 1) << STEP) {
+        const TABLE uint16_t *at = node + (a >> STEP);
+        q = *at++;
+        q += ((uint16_t)(*at - q) * (a & ((1UL << STEP) - 1)) + (1UL << (STEP - 1))) >> STEP;
     }
-    return (uint16_t)(z < 0 ? 32768 - q : q);
+    return z < 0 ? 32768 - q : q;
 }
 #endif
