@@ -7,7 +7,7 @@ import math
 from pathlib import Path
 from typing import Any
 
-from models import sample_sealed_models
+from models import sample_extended_models, sample_integer_models, sample_sealed_models
 
 from export.targets import (
     TARGETS,
@@ -17,8 +17,10 @@ from export.vectors import make_vectors, self_test_of
 from runtime_min.arithmetic import raw_bits
 from runtime_min.model import SealedModel
 
-MODELS = {name: sealed for name, (_, sealed) in sample_sealed_models().items()}
+MODELS = {name: sealed for name, (_, sealed) in {**sample_sealed_models(), **sample_extended_models()}.items()}
+INTEGER_MODELS = {name: sealed for name, (_, sealed) in sample_integer_models().items()}
 ARITHMETICS = ("binary64", "binary32")
+INTEGERS = ("int16", "int32")
 PYTHON = TARGETS["python"]
 NAN, INFINITY = math.nan, math.inf
 

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import pytest
-from models import sample_sealed_models
+from models import sample_extended_models, sample_sealed_models
 
 from export.targets import TARGETS
 from export.vectors import expected, make_vectors, self_test_of
@@ -34,7 +34,7 @@ MISSING = [
 ]
 pytestmark = pytest.mark.skipif(bool(MISSING), reason=f"MicroPython was not run: install {' and '.join(MISSING)}")
 
-MODELS = {name: sealed for name, (_, sealed) in sample_sealed_models().items()}
+MODELS = {name: sealed for name, (_, sealed) in {**sample_sealed_models(), **sample_extended_models()}.items()}
 
 
 @dataclass(frozen=True)

@@ -5,6 +5,7 @@ Expected values: the codes of `export.targets`, and sentences.
 
 from __future__ import annotations
 
+import ast
 import math
 import re
 import struct
@@ -15,7 +16,7 @@ from typing import Any
 
 import pytest
 from line_models import line_model
-from python_modules import ARITHMETICS, INFINITY, MODELS, PYTHON, loaded, source, written
+from python_modules import ARITHMETICS, INFINITY, INTEGER_MODELS, INTEGERS, MODELS, PYTHON, loaded, source, written
 
 from export.targets import (
     SELF_TEST_ROUNDING,
@@ -25,7 +26,8 @@ from export.targets import (
 )
 from export.targets.python import runner
 from export.vectors import make_vectors, next_to, self_test_of
-from runtime_min.validity import device_numbers
+from runtime_min.device_numbers import device_numbers
+from runtime_min.model import SealedModel
 
 # --- the self-test ---------------------------------------------------------------------------------------------------
 
@@ -126,6 +128,115 @@ def test_self_test_finds_wrong_rounding_of_binary32(change: Any, code: int) -> N
     text = source(line_model("binary32"))
     other = standing_in(pack=lambda layout, *xs: struct.pack(layout, *map(change, xs)), unpack=struct.unpack)
     assert with_modules(text, math=math, struct=other)["self_test"]() == code
+
+
+# --- in integers -----------------------------------------------------------------------------------------------------
+
+
+DEVICE_NUMBERS = re.compile("(LOW|HIGH|TYPICAL|DATUM|SHIFT|WEIGHTS?)_.*|INTERCEPT|THRESHOLDS|DROP|STEP|NODES")
+
+
+@pytest.mark.parametrize("name", ["pump_int16", "pump_int32", "counts_int16", "levels_only_int32", "wide_int16"])
+def test_self_test_finds_every_integer_off_by_one(name: str) -> None:
+    """Every literal of a device number's assignment, one more and one less in size."""
+    sealed = INTEGER_MODELS[name]
+    lines = source(sealed).splitlines(keepends=True)
+    tried = 0
+    for part in ast.parse("".join(lines)).body:
+        if not isinstance(part, ast.Assign) or not DEVICE_NUMBERS.fullmatch(ast.unparse(part.targets[0])):
+            continue
+        for node in ast.walk(part.value):
+            if not isinstance(node, ast.Constant):
+                continue
+            line, size = lines[node.lineno - 1], int(node.value)
+            for other in (size - 1, size + 1):
+                planted = line[: node.col_offset] + str(other) + line[node.end_col_offset :]
+                text = "".join([*lines[: node.lineno - 1], planted, *lines[node.lineno :]])
+                assert loaded(text)["self_test"]() == SELF_TEST_TABLES, planted
+            tried += 1
+    assert tried == len(list(device_numbers(sealed)))
+
+
+def all_vectors(sealed: SealedModel) -> str:
+    """The module with every vector in its self-test."""
+    vectors = make_vectors(sealed)
+    return PYTHON.emit(sealed, replace(self_test_of(sealed, vectors), vectors=vectors)).decode("ascii")
+
+
+@pytest.mark.parametrize("arithmetic", INTEGERS)
+@pytest.mark.parametrize(
+    ("right", "wrong"),
+    [
+        ("<< SHIFT_SUCTION", "<< SHIFT_SUCTION + 1"),
+        ("(n_flow - DATUM_FLOW)", "(n_flow + DATUM_FLOW)"),
+        ("* (a & REST) + HALF >> STEP", "* (a & REST) >> STEP"),  # downwards instead of to the nearest
+        ("* (a & REST) + HALF >> STEP", "* (a & REST) + REST >> STEP"),  # upwards
+        ("a = abs(z) >> DROP", "a = abs(z >> DROP)"),  # a shift right of a negative number rounds away from zero
+        ("NODES[i + 1] - NODES[i]", "NODES[i] - NODES[i - 1]"),
+        ("WEIGHTS_IMPELLER[n_impeller]", "WEIGHTS_IMPELLER[-n_impeller]"),
+        ("else 32768 - q", "else 32767 - q"),
+        ("x_vibration == MISSING:", "x_vibration == 0:"),
+    ],
+)
+def test_self_test_finds_a_changed_step_in_integers(arithmetic: str, right: str, wrong: str) -> None:
+    text = all_vectors(INTEGER_MODELS[f"pump_{arithmetic}"])
+    assert right in text
+    assert loaded(text)["self_test"]() == 0
+    assert loaded(text.replace(right, wrong))["self_test"]() >= SELF_TEST_VECTOR
+
+
+@pytest.mark.parametrize("arithmetic", INTEGERS)
+def test_self_test_finds_a_threshold_that_no_longer_counts_as_class_1(arithmetic: str) -> None:
+    """A row whose log-odds are the threshold itself: x = 4."""
+    text = all_vectors(line_model(arithmetic))
+    assert loaded(text)["self_test"]() == 0
+    assert loaded(text.replace("if z >= THRESHOLD_HIGH", "if z > THRESHOLD_HIGH"))["self_test"]() >= SELF_TEST_VECTOR
+
+
+@pytest.mark.parametrize("arithmetic", INTEGERS)
+@pytest.mark.parametrize(
+    "change",
+    [
+        ("node 0", r"NODES = \(\s+16384", "NODES = (16383"),
+        ("node 8", "28873", "28874"),
+        (
+            "the last bit of a weight",
+            r"WEIGHT_SUCTION = (-?\d+)",
+            lambda found: f"WEIGHT_SUCTION = {int(found[1]) ^ 1}",
+        ),
+        ("a shift", r"SHIFT_FLOW = (\d+)", lambda found: f"SHIFT_FLOW = {int(found[1]) - 1}"),
+        ("a level's sign", r"    (-?\d+),  # open", lambda found: f"    {-int(found[1])},  # open"),
+        ("rounding", r"\+ HALF >> STEP", ">> STEP"),
+        ("16 bits", "z \\+= WEIGHT_SUCTION", "z = ((z + 32768) & 0xFFFF) - 32768\n    z += WEIGHT_SUCTION"),
+    ],
+    ids=lambda change: change[0],
+)
+def test_running_alone_finds_a_planted_mistake_in_integers(arithmetic: str, change: Any, tmp_path: Path) -> None:
+    """With a self-test that finds nothing."""
+    sealed = INTEGER_MODELS[f"pump_{arithmetic}"]
+    vectors = make_vectors(sealed)
+    _, right, wrong = change
+    planted, count = re.subn(right, wrong, source(sealed))
+    assert count == 1
+    planted += "\n\ndef self_test():\n    return 0\n"
+    (run,) = PYTHON.run(written(sealed, tmp_path, planted), sealed, [vector.inputs for vector in vectors], False)
+    assert (run.trouble, run.self_test) == (None, 0)
+    assert list(run.outputs or ()) != [vector.expected for vector in vectors]
+
+
+@pytest.mark.parametrize(
+    ("planted", "trouble"),
+    [
+        ("def log_odds(inputs): return 2**31", "printed what is no output: row 1: 2147483648 is beyond 32 bits"),
+        ("def probability(inputs): return 1.0", "printed what is no output: row 1: 1.0 is no int"),
+        ("def probability(inputs): return True", "printed what is no output: row 1: True is no int"),
+    ],
+)
+def test_runner_finds_an_output_that_is_no_number_of_int16(planted: str, trouble: str, tmp_path: Path) -> None:
+    sealed = line_model("int16")
+    text = source(sealed) + f"\n\n{planted}\n\n\ndef self_test(): return 0\n"
+    (run,) = PYTHON.run(written(sealed, tmp_path, text), sealed, [(4,)], False)
+    assert (run.ran, run.trouble, run.outputs) == (True, trouble, ())
 
 
 # --- the runner ------------------------------------------------------------------------------------------------------

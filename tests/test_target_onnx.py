@@ -21,15 +21,16 @@ import onnx
 import onnxruntime
 import pytest
 from line_models import HOSTILE, level_model, line_model, named_model, with_text
-from models import sample_sealed_models
+from models import sample_extended_models, sample_sealed_models
 
 from export.targets import SELF_TEST_TABLES, TARGETS, Output, SelfTest
 from export.targets.onnx import runner
 from export.vectors import expected, make_vectors
 from runtime_min.arithmetic import raw_bits
 from runtime_min.model import SealedModel
+from runtime_min.names import delivered_unit
 
-MODELS = {name: sealed for name, (_, sealed) in sample_sealed_models().items()}
+MODELS = {name: sealed for name, (_, sealed) in {**sample_sealed_models(), **sample_extended_models()}.items()}
 ARITHMETICS = ("binary64", "binary32")
 ONNX = TARGETS["onnx"]
 NAN, INFINITY = math.nan, math.inf
@@ -248,7 +249,7 @@ def test_metadata_names_the_model(name: str) -> None:
     assert json.loads(metadata["thresholds"]) == [sealed.decision.low, sealed.decision.high]
     inputs = json.loads(metadata["inputs"])
     assert [entry["name"] for entry in inputs] == [entry.name for entry in sealed.inputs]
-    assert [entry["unit"] for entry in inputs] == [entry.unit for entry in sealed.inputs]
+    assert [entry["unit"] for entry in inputs] == [delivered_unit(entry) for entry in sealed.inputs]
     assert "not a safety function" in metadata["caution"]
     assert sealed.model_id in model.doc_string
 

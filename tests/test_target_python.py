@@ -27,6 +27,7 @@ from export.targets.python import lexical
 from export.vectors import expected, make_vectors, self_test_of
 from runtime_min.arithmetic import raw_bits
 from runtime_min.errors import ReleaseError
+from runtime_min.names import delivered_unit
 from runtime_min.validity import device_numbers
 
 # Names that the module or Python itself uses, lower-case as a plan's are.
@@ -191,11 +192,38 @@ def test_module_names_the_model(name: str) -> None:
     assert module["ARITHMETIC"] == sealed.arithmetic
     assert module["CLASSES"] == sealed.classes
     assert module["THRESHOLDS"] == (sealed.decision.low, sealed.decision.high)
-    assert module["INPUTS"] == tuple((entry.name, entry.unit, entry.low, entry.high) for entry in sealed.inputs)
+    named = tuple((entry.name, delivered_unit(entry), entry.low, entry.high) for entry in sealed.inputs)
+    assert module["INPUTS"] == named
     assert sealed.model_id in module["__doc__"]
     assert "not a safety function" in module["__doc__"]
     for entry in sealed.inputs:
         assert entry.unit in module["__doc__"]
+
+
+@pytest.mark.parametrize("arithmetic", ARITHMETICS)
+def test_units_say_what_is_delivered(arithmetic: str) -> None:
+    """An origin and counts, in the words of the plan: 101325 Pa; 0.1 kPa a count, from -95."""
+    text = source(MODELS[f"mixed_{arithmetic}"])
+    units = [unit for _, unit, _, _ in loaded(text)["INPUTS"]]
+    assert units == ["Pa above 101325", "counts of 0.1 kPa from -95", "m\xb3/h", ""]
+    assert re.search(r"^WEIGHT_ADC = \S+  # per count$", text, re.MULTILINE)
+    assert re.search(r"^WEIGHT_PRESSURE = \S+  # per Pa$", text, re.MULTILINE)
+
+
+@pytest.mark.parametrize("name", [name for name in MODELS if name.startswith(("mixed", "undecided"))])
+def test_no_call_is_decided_between_the_thresholds(name: str) -> None:
+    """All three decisions, each where the log-odds that the module itself gives lie."""
+    sealed = MODELS[name]
+    module = loaded(source(sealed))
+    low, high = module["THRESHOLDS"]
+    assert low < high
+    seen = set()
+    for vector in make_vectors(sealed):
+        z = module["log_odds"](vector.inputs)
+        right = -2 if math.isnan(z) else 1 if z >= high else 0 if z < low else -1
+        assert module["decide"](vector.inputs) == right
+        seen.add(right)
+    assert seen == {-2, -1, 0, 1}
 
 
 @pytest.mark.parametrize("name", MODELS)
