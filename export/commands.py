@@ -170,7 +170,7 @@ def _ship(request: argparse.Namespace) -> int:
 
 
 def _ship_into(request: argparse.Namespace, into: Path) -> int:
-    from export.report import check_lines, fit_lines, model_line, report_json
+    from export.report import check_lines, fit_lines, model_lines, report_json
 
     unchecked, on = _unchecked(request), _on(request)
     with _progress() as progress:
@@ -179,7 +179,7 @@ def _ship_into(request: argparse.Namespace, into: Path) -> int:
         from export.release import write_release
 
     if not request.json:
-        _print([model_line(sealed), *fit_lines(trained)])
+        _print([*model_lines(sealed), *fit_lines(trained)])
     with _progress() as progress:
         progress("holding the fit against the raw rows")
         report = write_release(
@@ -218,7 +218,7 @@ def _told(into: Path) -> Iterator[None]:
 
 def _fit(request: argparse.Namespace) -> int:
     from export.folder import write_files
-    from export.report import fit_lines, model_line
+    from export.report import fit_lines, model_lines
     from runtime_min.codec import sealed_text, trained_text
 
     with _progress() as progress:
@@ -229,7 +229,7 @@ def _fit(request: argparse.Namespace) -> int:
         f"{plan.model}.sealed.json": sealed_text(sealed).encode(),
     }
     write_files(into, written)
-    _print([model_line(sealed), *fit_lines(trained), *(f"{'written':<12}{into / name}" for name in written)])
+    _print([*model_lines(sealed), *fit_lines(trained), *(f"{'written':<12}{into / name}" for name in written)])
     return 0
 
 

@@ -51,6 +51,7 @@ def handoff_md(
         passed_unit=lambda entry: "counts" if entry.counts else delivered_unit(entry),
         meaning=_meaning(sealed, vector),
         deliveries=list(_deliveries(sealed)),
+        assumed=[entry.name for entry in sealed.about.request.inputs if entry.assumed and not entry.levels],
         number=forms.log_odds.decimal,
         files=[
             (FILE_MEANS.get(target.name, f"the {target.name} artefact"), target.file(sealed))

@@ -10,7 +10,7 @@ from typing import Any
 
 from export.check import Check, Report
 from export.parts.board import BOARD
-from runtime_min.model import SealedModel, TrainedModel
+from runtime_min.model import Choice, SealedModel, TrainedModel
 
 WIDTH = 80
 _INDENT = 10
@@ -29,10 +29,14 @@ def fit_lines(trained: TrainedModel) -> list[str]:
     """What was fitted, and how it does on the rows that were never fitted."""
     rows, certificate = trained.rows, trained.certificate
     classes = zip(trained.class_weights, trained.classes, strict=True)
-    shares = ", ".join(f"{weight:,.10g} {name}" for weight, name in classes)
+    shares = ", ".join(f"{weight:,.10g} {_shown(name)}" for weight, name in classes)
+    weightless = rows.total - rows.dropped - rows.fitted - rows.held_out
     dropped = f", {rows.dropped:,} dropped for a missing value" if rows.dropped else ""
+    dropped += f", {weightless:,} of weight 0" if weightless else ""
     lines = [
-        _line("rows", f"{rows.total:,} read{dropped}, {rows.fitted:,} fitted ({shares}), {rows.held_out:,} held out"),
+        _line("rows", f"{rows.total:,} read{dropped}, {rows.fitted:,} fitted, {rows.held_out:,} held out"),
+        _line("", f"{shares} (the event)"),
+        *_choice_lines(trained.choice),
         _line("fit", f"{len(trained.terms)} terms, within {certificate.distance:.1e} posterior sd of the optimum"),
         _line(
             "",
@@ -51,9 +55,34 @@ def fit_lines(trained: TrainedModel) -> list[str]:
     return [*lines, *(f"{'':<{_INDENT}}{what:<18}{model:<10}{base}" for what, model, base in table)]
 
 
-def model_line(sealed: SealedModel) -> str:
-    """The model's name, id and arithmetic."""
-    return f"{sealed.name} {sealed.model_id}, {sealed.arithmetic}"
+def _choice_lines(choice: Choice | None) -> list[str]:
+    """The prior's sd where the rows chose it; a choice at an end of the grid wants a look."""
+    if choice is None:
+        return []
+    chosen = next(strength for strength in choice.strengths if strength.sd == choice.sd)
+    text = (
+        f"sd {choice.sd:g} by {choice.method} in {choice.folds} folds, log loss {chosen.log_loss:.4f} "
+        f"(standard error {chosen.standard_error:.4f})"
+    )
+    sds = [strength.sd for strength in choice.strengths]
+    if choice.sd in (min(sds), max(sds)):
+        text += "; it is the end of what was tried: the inputs say almost nothing, or all"
+    return [_line("prior", text)]
+
+
+def model_lines(sealed: SealedModel) -> list[str]:
+    """The model's name, id and arithmetic, and the ranges that nobody stated."""
+    lines = [f"{sealed.name} {sealed.model_id}, {sealed.arithmetic}"]
+    assumed = [entry.name for entry in sealed.about.request.inputs if entry.assumed and not entry.levels]
+    if assumed:
+        text = f"the ranges of {', '.join(assumed)} are the rows' own, a tenth wider: state what the device can deliver"
+        lines.append(_line("assumed", text))
+    return lines
+
+
+def _shown(text: str) -> str:
+    """Text of a plan or file on a terminal: nothing that moves the cursor or turns the line around."""
+    return "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in text)
 
 
 def check_lines(report: Report) -> list[str]:
@@ -98,7 +127,7 @@ def _check_line(entry: Check, accepted: tuple[str, ...]) -> str:
     label = entry.artefact.removesuffix(".json").rpartition(".")[2] if entry.artefact.endswith(".json") else None
     of_model = entry.target and entry.artefact != BOARD
     label = label or (f".{entry.artefact.rpartition('.')[2]}" if of_model else entry.artefact)
-    return _folded(f"{mark:<8}{label:<13}{entry.what}: {entry.found}", 21)
+    return _folded(f"{mark:<8}{label:<13}{_shown(entry.what)}: {_shown(entry.found)}", 21)
 
 
 def _up(value: float) -> str:
