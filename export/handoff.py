@@ -5,8 +5,9 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator, Sequence
 from fractions import Fraction
+from functools import lru_cache
 
-from jinja2 import Environment, PackageLoader, StrictUndefined
+from jinja2 import Environment, PackageLoader, StrictUndefined, Template
 
 from export.coefficients import coefficients, coefficients_csv, one_line
 from export.targets import TARGETS, Vector
@@ -32,14 +33,9 @@ def handoff_md(
     sealed: SealedModel, vectors: Sequence[Vector], write: Sequence[str], prevalence: str | None = None
 ) -> bytes:
     """The text of HANDOFF.md. prevalence: the event's share in the field, where the trained model states one."""
-    environment = Environment(
-        loader=PackageLoader("export", "."), undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True,
-        keep_trailing_newline=True,
-    )
-    environment.filters["md"] = markdown_text
     vector, steps = worked_example(sealed, vectors)
     forms = forms_of(sealed)
-    text = environment.get_template("handoff.md.jinja").render(
+    text = _template().render(
         sealed=sealed,
         prevalence=prevalence,
         coefficients=coefficients(sealed),
@@ -112,6 +108,16 @@ def _deliveries(sealed: SealedModel) -> Iterator[str]:
         elif entry.origin is not None:
             origin = exact_decimal(Fraction(entry.origin))
             yield f"{entry.name}: the value less {origin}{unit}, subtracted before it becomes a {sealed.arithmetic}."
+
+
+@lru_cache(maxsize=1)
+def _template() -> Template:
+    environment = Environment(
+        loader=PackageLoader("export", "."), undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+    environment.filters["md"] = markdown_text
+    return environment.get_template("handoff.md.jinja")
 
 
 def markdown_text(text: str) -> str:

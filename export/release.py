@@ -66,7 +66,7 @@ def write_release(
 
 def export_artefacts(sealed: SealedModel, into: Path, write: Sequence[str]) -> tuple[str, ...]:
     """Write what follows from a sealed model alone, unchecked, as one folder; returns the names of the files."""
-    _refuse_foreign(into)
+    _refuse_foreign(into, shipped=False)
     files = artefacts(sealed, write, make_vectors(sealed))
     with folder.building(into) as staging:
         for name, data in files.items():
@@ -76,8 +76,11 @@ def export_artefacts(sealed: SealedModel, into: Path, write: Sequence[str]) -> t
     return tuple(sorted(files))
 
 
-def _refuse_foreign(into: Path) -> None:
-    """What is no release, or holds what no release wrote, is never replaced. A link is followed, and stays."""
+def _refuse_foreign(into: Path, shipped: bool = True) -> None:
+    """What is no release, or holds what no release wrote, is never replaced. A link is followed, and stays.
+
+    shipped: whether a release that was shipped, with its trained model and checks, may be replaced.
+    """
     place = folder.followed(into)
     found = "is there and is not a release"
     try:
@@ -90,9 +93,11 @@ def _refuse_foreign(into: Path) -> None:
             if manifest["format"] == MANIFEST_FORMAT:
                 written = {*manifest["files"], MANIFEST, "__pycache__"}
                 others = sorted(entry.name for entry in place.iterdir() if entry.name not in written)
-                if not others:
+                if not others and (shipped or not manifest["checks"]):
                     return
-                found = f"is a release that also holds {', '.join(others)}, which would be lost"
+                found = "is a release with its checks, and an export has none"
+                if others:
+                    found = f"is a release that also holds {', '.join(others)}, which would be lost"
     except (FileNotFoundError, NotADirectoryError, ValueError, KeyError, TypeError, RecursionError):
         pass
     except OSError as error:

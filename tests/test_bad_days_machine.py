@@ -166,6 +166,19 @@ def test_release_that_holds_a_file_of_the_user_is_not_replaced(
     assert main(["ship", str(plan)]) == 0
 
 
+def test_export_does_not_replace_a_release_that_was_shipped(
+    plan: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["ship", str(plan)]) == 0
+    release, sealed = tmp_path / "release", tmp_path / "release" / "small.sealed.json"
+    before = names(release)
+    assert main(["export", str(sealed), "--into", str(release)]) == 2
+    assert "is a release with its checks, and an export has none; choose another" in capsys.readouterr().err
+    assert names(release) == before
+    for _ in range(2):
+        assert main(["export", str(sealed), "--into", str(tmp_path / "artefacts")]) == 0
+
+
 def test_folders_above_are_made_and_removed_again_where_nothing_was_released(
     plan: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
 ) -> None:
