@@ -6,31 +6,42 @@ two are equal (Elkan 2001), so p = c_fa / (c_fa + c_m) there, and half the width
 
 from __future__ import annotations
 
-import math
+from decimal import ROUND_HALF_EVEN, Context, Decimal
 from fractions import Fraction
 
 from export.exact import unit
+from export.interval import half_unit
 from runtime_min.model import INTEGERS, SealedModel
 
-# What a threshold may be off by: its rounding to the arithmetic, and the logarithm's in binary64 here.
-SHARES = {"binary64": 2.0**-50, "binary32": 2.0**-23}
+LOGARITHMS = Fraction(1, 10**45)
+"""More than what two logarithms at 60 digits can be off by; far less than the finest unit of a threshold, 2^-62."""
 
 
 def wrong_thresholds(sealed: SealedModel) -> str:
-    """One sentence where a sealed threshold is not what was asked for; empty where both are."""
+    """One sentence where a sealed threshold is not what was asked for, rounded once; empty where both are."""
     asked = sealed.about.request.decision
     if asked.threshold is not None:
-        middle = float(Fraction(asked.threshold))
+        middle = Fraction(asked.threshold)
     elif asked.cost_false_alarm is not None and asked.cost_miss is not None:
         alarm, miss = Fraction(asked.cost_false_alarm), Fraction(asked.cost_miss)
-        middle = math.log(alarm / (alarm + miss)) - math.log(miss / (alarm + miss))
+        middle = _logit(alarm / (alarm + miss))
     else:
         return "the request has neither costs nor a threshold"
-    half = float(Fraction(asked.no_call or 0))
-    step = float(unit(sealed))
+    half, step = Fraction(asked.no_call or 0), unit(sealed)
     for device, wanted in ((sealed.decision.low, middle - half), (sealed.decision.high, middle + half)):
-        at = float(device) * step
-        allowed = step if sealed.arithmetic in INTEGERS else SHARES[sealed.arithmetic] * (abs(middle) + half + 1.0)
-        if not abs(at - wanted) <= allowed:
-            return f"a threshold is {at:.10g}, the costs and no_call give {wanted:.10g}"
+        at = Fraction(device) * step
+        largest = max(abs(at), abs(wanted))
+        allowed = step / 2 if sealed.arithmetic in INTEGERS else half_unit(sealed.arithmetic, largest)
+        if not abs(at - wanted) <= allowed + LOGARITHMS:
+            return f"a threshold is {float(at):.17g}, the costs and no_call give {float(wanted):.17g}"
     return ""
+
+
+def _logit(p: Fraction) -> Fraction:
+    """ln(p) - ln(1 - p) to 60 digits, each logarithm that of a rounded decimal."""
+    context = Context(prec=60, rounding=ROUND_HALF_EVEN)
+
+    def log(value: Fraction) -> Fraction:
+        return Fraction(context.ln(context.divide(Decimal(value.numerator), Decimal(value.denominator))))
+
+    return log(p) - log(1 - p)
