@@ -7,10 +7,8 @@ anyway pays less.
 
 from __future__ import annotations
 
-import subprocess
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from pathlib import Path
 
 from export.parts import Part
 from export.parts.program import (
@@ -21,6 +19,7 @@ from export.parts.program import (
     program,
     row_bytes,
     run_program,
+    sizes,
     types_of,
 )
 from runtime_min.model import SealedModel
@@ -105,16 +104,8 @@ def _cost(
     main = program("measure.c.jinja", sealed, rows=texts, count=len(texts), result=result, painted=PAINTED)
     with folder_of(part, {**sources, "measure.c": main}) as folder:
         compile_program(part, folder, FLAGS)
-        text, data = _sizes(part, folder)
+        text, data = sizes(part, folder)
         stack, *lines = run_program(part, folder, SECONDS, counted=True)
     pairs = [line.split(" ") for line in lines]
     counts = tuple(part.chain.counted(part, int(ticks, 16)) for ticks, _ in pairs)
     return Cost(text, data, int(stack, 16), counts, tuple(answer for _, answer in pairs))
-
-
-def _sizes(part: Part, folder: Path) -> tuple[int, int]:
-    """Bytes of program memory (initial values of data included) and of data memory, as the toolchain's `size` says."""
-    command = [part.tools[0].command.removesuffix("gcc") + "size", "program.elf"]
-    done = subprocess.run(command, cwd=folder, capture_output=True, text=True, timeout=30, check=True)
-    text, data, bss = (int(word) for word in done.stdout.splitlines()[1].split()[:3])
-    return text + data, data + bss

@@ -19,6 +19,8 @@ from runtime_min.model import FLOATS, SealedModel
 FLAGS = ("-std=gnu99", "-Os")
 SECONDS = 60
 SHOWN_LINES = 3
+# What linkers and compilers say of a program, a section or an array that is larger than the part.
+TOO_LARGE = (" overflowed by ", "will not fit in region", "is too large")
 END = "end"
 
 
@@ -66,12 +68,24 @@ def compile_program(part: Part, folder: Path, flags: Sequence[str]) -> None:
     Raises SpaceError where it does not fit, TroubleError with the compiler's first words where something else is wrong.
     """
     sources = sorted(path.name for path in folder.iterdir() if path.suffix == ".c")
+    does_not_fit = f"it does not fit into {part.rom} bytes of program memory and {part.ram} of data memory"
     done = _ran(part.chain.compile_command(part, flags, sources), folder, SECONDS, "the compiler")
     if done.returncode != 0:
-        if " overflowed by " in done.stderr:
-            raise SpaceError(f"it does not fit into {part.rom} bytes of program memory and {part.ram} of data memory")
+        if any(words in done.stderr for words in TOO_LARGE):
+            raise SpaceError(does_not_fit)
         lines = [line for line in done.stderr.splitlines() if "error" in line or "warning" in line]
         raise TroubleError("it does not compile: " + (" | ".join(lines[:SHOWN_LINES]) or "no message"))
+    text, data = sizes(part, folder)
+    if text > part.rom or data > part.ram:  # not every linker knows how large the part is
+        raise SpaceError(does_not_fit)
+
+
+def sizes(part: Part, folder: Path) -> tuple[int, int]:
+    """Bytes of program memory (initial values of data included) and of data memory, as the toolchain's `size` says."""
+    command = [part.tools[0].command.removesuffix("gcc") + "size", "program.elf"]
+    done = subprocess.run(command, cwd=folder, capture_output=True, text=True, timeout=30, check=True)
+    text, data, bss = (int(word) for word in done.stdout.splitlines()[1].split()[:3])
+    return text + data, data + bss
 
 
 def run_program(part: Part, folder: Path, seconds: float, *, counted: bool = False, end: str | None = END) -> list[str]:
