@@ -79,6 +79,7 @@ class Run:
 
 
 Emit = Callable[[SealedModel, SelfTest], bytes]
+EmitBeside = Callable[[SealedModel], dict[str, bytes]]
 Runner = Callable[[Path, SealedModel, Sequence[Sequence[float]], bool], Iterator[Run]]
 
 
@@ -100,7 +101,7 @@ class Target:
 
     def files(self, sealed: SealedModel, self_test: SelfTest) -> dict[str, bytes]:
         """The artefact and what goes beside it, by file name."""
-        beside = getattr(import_module(f"export.targets.{self.name}.emit"), "emit_beside", lambda sealed: {})
+        beside: EmitBeside = getattr(import_module(f"export.targets.{self.name}.emit"), "emit_beside", _nothing_beside)
         return {self.file(sealed): self.emit(sealed, self_test), **beside(sealed)}
 
     def run(
@@ -108,6 +109,10 @@ class Target:
     ) -> Iterator[Run]:
         """Run the artefact on rows of inputs: a quick subset of ways, or (thorough) all of them."""
         return cast(Runner, import_module(f"export.targets.{self.name}.runner").run)(artefact, sealed, rows, thorough)
+
+
+def _nothing_beside(sealed: SealedModel) -> dict[str, bytes]:
+    return {}
 
 
 TARGETS = {
