@@ -217,8 +217,15 @@ def _digests(into: Path, manifest: dict[str, Any]) -> Check:
             same = False
         if not same:
             other.append(name)
-    found = f"{len(manifest['files'])} files as written" if not other else f"not as written: {', '.join(other)}"
-    return _judged(MANIFEST, "digest of every file", len(other), found)
+    beside = {entry.name for entry in into.iterdir()} - {*manifest["files"], MANIFEST}
+    unnamed = sorted(name for name in beside if name.startswith((f"{manifest['model']}.", f"{manifest['model']}_")))
+    said = [
+        f"{words}: {', '.join(names)}"
+        for words, names in (("not as written", other), ("named like the model, and not in the manifest", unnamed))
+        if names
+    ]
+    found = "; ".join(said) or f"{len(manifest['files'])} files as written"
+    return _judged(MANIFEST, "digest of every file", len(other) + len(unnamed), found)
 
 
 def _same_model(
@@ -227,6 +234,9 @@ def _same_model(
     name = f"{sealed.name}.sealed.json"
     same = sealed.model_id == manifest["model_id"]
     found = sealed.model_id if same else f"the sealed model is {sealed.model_id}, the manifest names another"
+    for key in ("rows_sha256", "plan_sha256"):
+        if same and manifest.get(key) != getattr(sealed.about, key):
+            same, found = False, f"the manifest's {key} is not that of the sealed model"
     yield _judged(name, "model id", int(not same), found)
     try:
         again = seal_request(trained, sealed.about.request, sealed.about.purpose, sealed.about.plan_sha256)
@@ -239,7 +249,10 @@ def _same_model(
         files = contents(sealed, trained, manifest["write"], made)
         differing = [file for file, data in files.items() if not _holds(into / file, data)]
         found = f"{len(files)} files, byte for byte" if not differing else f"other bytes in {', '.join(differing)}"
-        yield _judged("every file", "written anew", len(differing), found)
+        unnamed = sorted(files.keys() - manifest["files"].keys()) if not differing else []
+        if unnamed:
+            found = f"the manifest does not name {', '.join(unnamed)}"
+        yield _judged("every file", "written anew", len(differing) + len(unnamed), found)
 
 
 def _holds(path: Path, data: bytes) -> bool:
@@ -273,12 +286,14 @@ def _first_other(have: str, want: str) -> str:
 
 
 def _reference(sealed: SealedModel, on_file: Sequence[Vector], path: Path) -> Check:
-    """The vectors on file against the reference scorer, and against the rows that this model must be tried on."""
+    """The vectors on file against the reference scorer; whether they are all of them, writing anew finds."""
     wrong = [row for row, vector in enumerate(on_file) if vectors.expected(sealed, vector.inputs) != vector.expected]
     found = f"{len(on_file)} rows, the same bits"
     if wrong:
         found = f"line {wrong[0] + 2} ({on_file[wrong[0]].kind}) is not what the reference scorer gives"
-    return _judged(path.name, "reference scorer", len(wrong), found)
+    elif not on_file:
+        found = "holds no row"
+    return _judged(path.name, "reference scorer", len(wrong) or int(not on_file), found)
 
 
 def _budget(
@@ -313,7 +328,7 @@ def _budget(
 def _compared(sealed: SealedModel, on_file: Sequence[Vector], run: Run, artefact: str, target: str) -> Check:
     if run.trouble is not None:
         return Check(artefact, run.what, run.ran, False, 0, run.trouble, target)
-    if run.model_id is not None and run.model_id != sealed.model_id:
+    if run.model_id != sealed.model_id and (run.model_id, run.outputs) != (None, None):  # HEX has no room for an id
         found = f"the artefact says model {run.model_id}, the release is {sealed.model_id}"
         return Check(artefact, run.what, True, False, 1, found, target)
     if run.outputs is None:

@@ -54,6 +54,12 @@ def replaced(old: str, new: str) -> Edit:
     return edit
 
 
+def last_bit_in_python(text: str) -> str:
+    """The next binary32 number, in the decimal that Python writes."""
+    pattern = r"(?<=\nWEIGHT_FLOW = )\S+"
+    return re.sub(pattern, lambda m: repr(float(np.nextafter(np.float32(float(m[0])), np.float32(np.inf)))), text)
+
+
 def six_digits(text: str) -> str:
     """Every literal of the tables to six significant digits, as printf's %g would write it."""
     start, end = text.index(f"{NAME}_low["), text.index("name_round" if "name_round" in text else f"{NAME}_round(")
@@ -98,7 +104,7 @@ C_MISTAKES = {
 BITS_OFF = ("last bit of a weight", "two weights swapped", "6-digit literals", "contraction on")
 
 PYTHON_MISTAKES = {
-    "last bit of a weight": (replaced(r"(?<=\nWEIGHT_FLOW = )\S+", "0.1"), "self-test returned 1"),
+    "last bit of a weight": (last_bit_in_python, "self-test returned 1"),
     "sign of the intercept": (replaced(r"(?<=\nINTERCEPT = )-", ""), "self-test returned 1.*the intercept"),
     "> for >= at the threshold": (replaced("z >= THRESHOLD_HIGH", "z > THRESHOLD_HIGH"), "look at the comparison"),
     "a range bound": (replaced(r"(?<=\nHIGH_SUCTION = )250.0", "249.0"), 'input "suction" = 250.0 is held against'),
@@ -133,8 +139,6 @@ def onnx_constant(wanted: float, change: Callable[[float], float]) -> Callable[[
     return edit
 
 
-
-
 GraphEdit = Callable[[onnx.ModelProto, SealedModel], None]
 
 
@@ -152,6 +156,12 @@ def another_id(graph: onnx.ModelProto, sealed: SealedModel) -> None:
     assert found
     for entry in found:
         entry.value = "0123456789abcdef"
+
+
+def no_id(graph: onnx.ModelProto, sealed: SealedModel) -> None:
+    """The metadata are gone."""
+    assert graph.metadata_props
+    del graph.metadata_props[:]
 
 
 ONNX_MISTAKES: dict[str, tuple[GraphEdit, str]] = {
@@ -175,6 +185,7 @@ ONNX_MISTAKES: dict[str, tuple[GraphEdit, str]] = {
     ),
     "> for >= at the threshold": (compared_without_equal, "exactly on the threshold: look at the comparison"),
     "another model's id": (another_id, "says model 0123456789abcdef"),
+    "no id at all": (no_id, "says model None"),
 }
 
 

@@ -15,6 +15,7 @@ from typing import Any
 
 import numpy as np
 
+from export import check
 from export.contents import MANIFEST, contents
 from export.vector_files import decimal_text
 from export.vectors import make_vectors
@@ -119,6 +120,24 @@ def edited_vector(text: str) -> str:
     return "".join([*lines[:7], ",".join(fields), *lines[8:]])
 
 
+def without_header(bench: Bench) -> list[str]:
+    """The C header is edited, and the manifest no longer speaks of it."""
+    bench.edit(f"{NAME}.h", lambda text: text.replace("z >= ", "z > "))
+    manifest = json.loads((bench.release / MANIFEST).read_text())
+    del manifest["files"][f"{NAME}.h"]
+    (bench.release / MANIFEST).write_text(json.dumps(manifest))
+    return bench.check(None)
+
+
+def unnamed_witness(bench: Bench) -> list[str]:
+    """A file that the release must hold, and that the manifest no longer speaks of."""
+    manifest = json.loads((bench.release / MANIFEST).read_text())
+    del manifest["files"]["witness.csv"]
+    (bench.release / MANIFEST).write_text(json.dumps(manifest))
+    report = check.check_release(bench.release)
+    return [f"{entry.artefact}: {entry.what}: {entry.found}" for entry in report.checks if not entry.ok]
+
+
 def removed(bench: Bench) -> list[str]:
     """One file is gone."""
     (bench.release / "HANDOFF.md").unlink()
@@ -149,6 +168,8 @@ MISTAKES = (
             "witness.csv: .*row 4 is the first"),
     Planted("trained model", "no witness at all", in_json(TRAINED, no_witness), "no witness row|witness"),
     Planted("vectors", "an expected output edited, decimal and bits", in_text("vectors.csv", edited_vector), "line 8"),
+    Planted("vectors", "all rows cut off",
+            in_text("vectors.csv", lambda text: text.splitlines(keepends=True)[0]), "vectors.csv: .*holds no row"),
     Planted("vectors", "most rows cut off",
             in_text("vectors.csv", lambda text: "".join(text.splitlines(keepends=True)[:9]), compare_text=True),
             "other bytes in .*vectors.csv"),
@@ -164,4 +185,10 @@ MISTAKES = (
     Planted("manifest", "another model's id",
             in_json(MANIFEST, lambda manifest: manifest.update(model_id="0123456789abcdef")),
             "the manifest names another"),
+    Planted("manifest", "other rows", in_json(MANIFEST, lambda manifest: manifest.update(rows_sha256="0" * 64)),
+            "the manifest's rows_sha256 is not that of the sealed model"),
+    Planted("manifest", "an edited artefact taken out of it", without_header,
+            f"digest of every file: named like the model, and not in the manifest: {NAME}.h"),
+    Planted("manifest", "a document taken out of it", unnamed_witness,
+            "written anew: the manifest does not name witness.csv"),
 )
