@@ -41,17 +41,21 @@ def prevalence_shift(trained: TrainedModel) -> Fraction:
     return Fraction(context.ln(Decimal(odds.numerator))) - Fraction(context.ln(Decimal(odds.denominator)))
 
 
-def trained_log_odds(trained: TrainedModel, values: Sequence[Fraction]) -> tuple[Fraction, ...]:
-    """Log-odds of values in plan units, one number a class after the first. Levels: 0, 1, … K - 1."""
+def standardised(trained: TrainedModel, values: Sequence[Fraction]) -> list[Fraction]:
+    """Each term's (v - centre) / scale, of values in plan units. Levels: 0, 1, … K - 1."""
     numbers = [
         values[term.of[0]] if term.level is None else Fraction(values[term.of[0]] == term.level)
         for term in trained.terms
     ]
-    columns = [
+    return [
         (number - Fraction(term.centre)) / Fraction(term.scale)
         for number, term in zip(numbers, trained.terms, strict=True)
     ]
-    shift = prevalence_shift(trained)
+
+
+def trained_log_odds(trained: TrainedModel, values: Sequence[Fraction]) -> tuple[Fraction, ...]:
+    """Log-odds of values in plan units, one number a class after the first."""
+    columns, shift = standardised(trained, values), prevalence_shift(trained)
     return tuple(
         Fraction(score.intercept)
         + shift

@@ -8,7 +8,7 @@ from fractions import Fraction
 from typing import NamedTuple
 
 from export.budget import Budget
-from export.exact import ZERO, delivered_value, slopes, unit
+from export.exact import ZERO, delivered_value, prevalence_shift, slopes, standardised, unit
 from runtime_min.model import INTEGERS, Input, SealedModel, TrainedModel, Witness, in_range
 from runtime_min.score import scores
 from runtime_min.sealing import round_to
@@ -31,7 +31,7 @@ def witness_misses(trained: TrainedModel, sealed: SealedModel, budget: Budget) -
 
     A witness row is in plan units: what the device delivers of it is found exactly, then rounded once. Counts that the
     plan gives are coarser than the witness, by design: the witness is moved to the value of the count, along the
-    trained weights.
+    trained weights. A bound of its own that is wider than a sum in binary64 can need counts for no more than that.
     """
     rows, compared, largest = [], 0, 0.0
     for position, row in enumerate(trained.witness):
@@ -41,7 +41,7 @@ def witness_misses(trained: TrainedModel, sealed: SealedModel, budget: Budget) -
         compared += 1
         for k, (device, said, bound) in enumerate(zip(scores(sealed, inputs), row.log_odds, row.bounds, strict=True)):
             meant = Fraction(said) + _to_counts(trained, sealed, k, exact, inputs)
-            allowed = budget.log_odds + Fraction(bound)
+            allowed = budget.log_odds + min(Fraction(bound), _widest(trained, k, row))
             difference = abs(Fraction(device) * unit(sealed) - meant)
             if difference:
                 largest = max(largest, float(difference / allowed) if allowed else math.inf)
@@ -71,6 +71,19 @@ def _carried(sealed: SealedModel, entry: Input, exact: Fraction) -> float:
     if entry.counts is not None or sealed.arithmetic in INTEGERS:
         return round(exact)
     return round_to(sealed.arithmetic, exact)
+
+
+def _widest(trained: TrainedModel, k: int, row: Witness) -> Fraction:
+    """(m + 6) 2^-52 (|B| + |d| + sum |W_j q_j|), and what may underflow: above any running bound of m terms.
+
+    Each of m partial sums, the first of them rounded twice, errs by 2^-53 of at most that sum, and each term by 3.01
+    times 2^-53 of itself (Higham 2002, Accuracy and Stability of Numerical Algorithms, section 3.3).
+    """
+    score, columns = trained.scores[k], standardised(trained, [Fraction(value) for value in row.inputs])
+    size = abs(Fraction(score.intercept)) + abs(prevalence_shift(trained))
+    size += sum((abs(Fraction(w) * column) for w, column in zip(score.weights, columns, strict=True)), ZERO)
+    underflow = (len(columns) + sum((abs(Fraction(w)) for w in score.weights), ZERO)) * Fraction(1, 2**1070)
+    return (len(columns) + 6) * Fraction(1, 2**52) * size + underflow
 
 
 def _to_counts(

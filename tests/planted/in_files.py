@@ -106,6 +106,11 @@ def off_by_a_hundredth(trained: Any) -> None:
     trained["trained"]["witness"][3]["log_odds"][0] += 0.01
 
 
+def off_within_a_wide_bound(trained: Any) -> None:
+    off_by_a_hundredth(trained)
+    trained["trained"]["witness"][3]["bounds"][0] = 1.0
+
+
 def no_witness(trained: Any) -> None:
     trained["trained"]["witness"] = []
 
@@ -166,6 +171,8 @@ MISTAKES = (
             "error budget: .*tolerance"),
     Planted("trained model", "witness edited", in_json(TRAINED, off_by_a_hundredth),
             "witness.csv: .*row 4 is the first"),
+    Planted("trained model", "witness edited, and its own bound widened to hide it",
+            in_json(TRAINED, off_within_a_wide_bound), "witness.csv: .*row 4 is the first"),
     Planted("trained model", "no witness at all", in_json(TRAINED, no_witness), "no witness row|witness"),
     Planted("vectors", "an expected output edited, decimal and bits", in_text("vectors.csv", edited_vector), "line 8"),
     Planted("vectors", "all rows cut off",
