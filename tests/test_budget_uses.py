@@ -38,20 +38,30 @@ def test_reference_scorer_stands_within_budget_of_the_witness(name: str) -> None
 
 
 def test_witness_off_by_more_than_budget_and_bound_is_a_miss() -> None:
-    trained, sealed = line("0", "10", scale=3.0)
+    trained, sealed = line("0", "10", scale=3.0, arithmetic="binary64")
     budget = derive(trained, sealed)
-    # 6 is a binary32 number and round(1/3) * 6 rounds to 2: the reference scorer is off by nothing.
-    bound = 2.0**-30
-    allowed = float(budget.log_odds) + bound
+    # round(1/3) * 6 rounds to 2: the reference scorer is off by nothing. Numbers above 2 are 2^-51 apart.
+    step, bound = 2.0**-51, 2.0**-50
+    most = int((budget.log_odds + Fraction(bound)) / Fraction(step))
     rows = (
-        Witness((6.0,), (2.0 + allowed * 0.999,), (bound,)),
-        Witness((6.0,), (2.0 - allowed * 1.001,), (bound,)),
+        Witness((6.0,), (2.0 + most * step,), (bound,)),
+        Witness((6.0,), (2.0 + (most + 1) * step,), (bound,)),
+        Witness((6.0,), (2.0 + most * step,), (0.0,)),
         Witness((11.0,), (100.0,), (bound,)),
         Witness((math.nan,), (100.0,), (bound,)),
     )
     misses = witness_misses(replace(trained, witness=rows), sealed, budget)
-    assert (misses.rows, misses.compared) == ((1,), 2)
-    assert misses.largest == pytest.approx(1.001, rel=1e-4)
+    assert (misses.rows, misses.compared) == ((1, 2), 3)
+
+
+def test_bound_of_a_witness_wider_than_binary64_needs_hides_nothing() -> None:
+    trained, sealed = line("0", "10", scale=3.0)
+    budget = derive(trained, sealed)
+    for off, missed in ((float(budget.log_odds) * 0.999, ()), (float(budget.log_odds) * 1.001, (0,))):
+        row = Witness((6.0,), (2.0 + off,), (1.0,))
+        misses = witness_misses(replace(trained, witness=(row,)), sealed, budget)
+        assert misses.rows == missed
+        assert misses.largest == pytest.approx(off / float(budget.log_odds), rel=1e-4)
 
 
 def test_witness_is_moved_to_the_count_that_the_device_has() -> None:
