@@ -13,6 +13,7 @@ from __future__ import annotations
 import binascii
 import re
 from dataclasses import dataclass
+from typing import Literal
 
 from runtime_min.arithmetic import raw_bits
 from runtime_min.model import Placement, SealedModel
@@ -50,7 +51,7 @@ def layout(sealed: SealedModel) -> Layout:
     """The table of a sealed model."""
     placement = sealed.about.request.table or DEFAULT
     width = WIDTH[sealed.arithmetic]
-    order = "little" if placement.byte_order == "little" else "big"
+    order: Literal["little", "big"] = "little" if placement.byte_order == "little" else "big"
     entries = []
     data = bytes.fromhex(sealed.model_id)
     for name, what, unit, value in _numbers(sealed):
