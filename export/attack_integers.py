@@ -4,7 +4,8 @@ The accumulator is exact, so that the error of a row is what its numbers are off
 
     e(n) = (b - T(d)) + sum_j (u_j 2^s_j - w_j) (n_j - d_j),
 
-and where the tool chose the counts, half a count times |w_j| with whichever sign hurts, the same for all. Every row is tried where there
+and where the tool chose the counts, half a count times |w_j| with whichever sign hurts, the same for all. Every row is
+tried where there
 are few enough; else uniform rows, corners, rows grown input by input (a beam) and changes of the best. Rows next to the
 limits and far from them are handed on too, so that the reference scorer is held against this picture of it.
 """

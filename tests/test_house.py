@@ -5,6 +5,7 @@ from __future__ import annotations
 import ast
 import subprocess
 import sys
+import tomllib
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -127,3 +128,18 @@ def test_the_walk_sees_every_kind_of_import(tmp_path: Path) -> None:
         ("json", "load"),
     ]
     assert len(SOURCES) > 20
+
+
+def test_every_file_beside_the_modules_is_package_data() -> None:
+    """What an installed copy would lack: a template, a schema, start-up code that pyproject.toml does not name."""
+    data = tomllib.loads((ROOT / "pyproject.toml").read_text())["tool"]["setuptools"]["package-data"]
+    command = ["git", "ls-files", "-co", "--exclude-standard", *ROOMS]
+    listed = subprocess.run(command, cwd=ROOT, capture_output=True, text=True, check=True)
+    files = [Path(line) for line in listed.stdout.splitlines() if not line.endswith((".py", ".pyc"))]
+    assert len(files) > 10
+    missing = [
+        str(file)
+        for file in files
+        if not any(file.match(pattern) for pattern in data.get(".".join(file.parent.parts), []))
+    ]
+    assert missing == []
