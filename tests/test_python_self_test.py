@@ -167,7 +167,7 @@ def all_vectors(sealed: SealedModel) -> str:
 @pytest.mark.parametrize(
     ("right", "wrong"),
     [
-        ("<< SHIFT_SUCTION", "<< SHIFT_SUCTION + 1"),
+        ("<< SHIFT_FLOW", "<< SHIFT_FLOW + 1"),
         ("(n_flow - DATUM_FLOW)", "(n_flow + DATUM_FLOW)"),
         ("* (a & REST) + HALF >> STEP", "* (a & REST) >> STEP"),  # downwards instead of to the nearest
         ("* (a & REST) + HALF >> STEP", "* (a & REST) + REST >> STEP"),  # upwards
