@@ -19,6 +19,7 @@ from runtime_min.names import delivered_unit
 from runtime_min.proof import Step, proof
 
 PARTS = ("integer_interface.h.jinja", "integer_scoring.h.jinja", "integer_self_test.h.jinja")
+HALVES = "HALVES"  # the macro that chooses the product in halves
 LEVELS = -1  # the shift of an input with levels, which has none
 ADDED = "shifted product"
 OTHER_STEPS = {
@@ -62,7 +63,7 @@ def integer_context(sealed: SealedModel, self_test: SelfTest) -> dict[str, objec
         "has_numbers": has_numbers,
         "mixed": has_levels and has_numbers,
         "level_weights": [
-            lexical.integer(weight, accumulator)
+            lexical.integer(int(weight), accumulator)
             for term in sealed.terms
             if term.form == "level"
             for weight in term.weights[0]
@@ -82,6 +83,7 @@ def integer_context(sealed: SealedModel, self_test: SelfTest) -> dict[str, objec
         "no_log_odds": lexical.integer(-(1 << (accumulator - 1)), accumulator),
         "real_threshold": lambda units: f"{float(Fraction(units) / 2 ** (sealed.accumulator_shift or 0)):.6g}",
         "delivered": delivered_unit,
+        "can_halve": can_halve(sealed),
         "scalings": scalings(sealed),
         "most": (1 << (count_bits(sealed) - 1)) - 1,
         "lpm": _lpm,
@@ -121,6 +123,14 @@ def proof_lines(sealed: SealedModel) -> Iterator[str]:
     for what, shown in OTHER_STEPS.items():
         of_it = [step for step in steps if step.what == what]
         yield f"    {shown}: {max(step.largest for step in of_it)} of {2 ** (of_it[0].bits - 1) - 1}"
+
+
+def can_halve(sealed: SealedModel) -> bool:
+    """Whether int32 products may be made of two products of 32 bits: no count is 2^15 or more from its datum."""
+    if sealed.arithmetic != "int32":
+        return False
+    distances = [step.largest for step in proof(sealed) if step.what == "count - datum"]
+    return bool(distances) and max(distances) < 1 << 15
 
 
 def _columns(sealed: SealedModel) -> list[str]:
