@@ -28,6 +28,7 @@ from export.parts.program import TroubleError
 from export.parts.run import run_part
 from export.targets import TARGETS, Run, Vector
 from export.targets.c.own_compiler import compile_own
+from export.targets.c.prove import prove as prove_header
 from export.thresholds import wrong_thresholds
 from export.vector_files import read_vectors
 from export.witness import witness_misses
@@ -92,6 +93,7 @@ def check_release(
     thorough: bool = False,
     unchecked: Sequence[str] = (),
     on: Sequence[str] = (),
+    prove: bool = False,
     compare_text: bool = True,
     progress: Callable[[str], None] = lambda step: None,
 ) -> Report:
@@ -99,6 +101,7 @@ def check_release(
 
     thorough: every way of running each artefact and a longer attack. unchecked: targets and parts that need not run.
     on: emulated parts, by name, that run the C header beside the one of the plan.
+    prove: a static analyser follows the C header too, for all inputs.
     compare_text: also write every file anew and compare bytes (off, only running can find a mistake).
 
     Raises ReleaseError where the folder is no release, or a part is none.
@@ -131,6 +134,9 @@ def check_release(
         artefact = into / TARGETS["c"].file(sealed)
         run, size = compile_own(compiler, artefact, sealed)
         checks.append(Check(artefact.name, run.what, run.ran, run.trouble is None, 0, run.trouble or size, "c"))
+    if prove:
+        progress("proving the C header for all inputs")
+        checks += _proofs(into / TARGETS["c"].file(sealed), sealed)
     measures: list[Measure] = []
     for part in _parts(sealed, on):
         progress(f"running {TARGETS['c'].file(sealed)} on {part.shown}")
@@ -146,6 +152,13 @@ def check_release(
         attack=found,
         tolerance=None if tolerance is None else Fraction(tolerance),
     )
+
+
+def _proofs(header: Path, sealed: SealedModel) -> list[Check]:
+    if not header.exists():
+        return [Check(header.name, "proof", False, False, 0, 'there is none; add "c" to write', "c")]
+    found = prove_header(header, sealed)
+    return [Check(header.name, one.what, one.ran, one.ok, one.alarms, one.found, "c") for one in found]
 
 
 def _parts(sealed: SealedModel, on: Sequence[str]) -> list[Part]:

@@ -144,6 +144,9 @@ def _check_options(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--on", action="append", default=[], metavar="PART", help="an emulated part that runs the C header too, or all"
     )
+    parser.add_argument(
+        "--prove", action="store_true", help="a static analyser follows the C header too, for all inputs (Frama-C)"
+    )
     parser.add_argument("--json", action="store_true", help="print the result for a program")
 
 
@@ -190,6 +193,7 @@ def _ship_into(request: argparse.Namespace, into: Path) -> int:
             thorough=request.all,
             unchecked=unchecked,
             on=on,
+            prove=request.prove,
             fit_checks=(_fit_check(plan, trained, sealed),),
             progress=progress,
         )
@@ -251,7 +255,12 @@ def _check(request: argparse.Namespace) -> int:
 
     with _progress() as progress:
         report = check_release(
-            request.release, thorough=request.all, unchecked=_unchecked(request), on=_on(request), progress=progress
+            request.release,
+            thorough=request.all,
+            unchecked=_unchecked(request),
+            on=_on(request),
+            prove=request.prove,
+            progress=progress,
         )
     _print([report_json(report)] if request.json else [f"{'model':<12}{report.model_id}", *check_lines(report)])
     return 0 if report.ok else 1

@@ -29,6 +29,7 @@ def write_release(
     thorough: bool = False,
     unchecked: Sequence[str] = (),
     on: Sequence[str] = (),
+    prove: bool = False,
     fit_checks: Sequence[check.Check] = (),
     progress: Callable[[str], None] = lambda step: None,
 ) -> check.Report:
@@ -37,6 +38,7 @@ def write_release(
     sealed, trained: from `seal` and `fit_map`. into: the release folder. write: targets by name. thorough: run each
     artefact in every way, not in a quick subset. unchecked: targets and parts that may be released without having run.
     on: emulated parts that run the C header, beside the one that the plan names.
+    prove: a static analyser follows the C header too, for all inputs.
     fit_checks: checks of the fit that were made beforehand, to stand in the same report.
 
     Returns the report; `report.ok` tells whether every check held and ran. A release in which an artefact could not be
@@ -54,7 +56,9 @@ def write_release(
         for name, data in files.items():
             (staging / name).write_bytes(data)
         _write_manifest(staging, sealed, files, write, ())
-        report = check.check_release(staging, thorough=thorough, unchecked=unchecked, on=on, progress=progress)
+        report = check.check_release(
+            staging, thorough=thorough, unchecked=unchecked, on=on, prove=prove, progress=progress
+        )
         report = replace(report, checks=(*fit_checks, *report.checks), release=str(into))
         if report.broken:
             return replace(report, release=None)
