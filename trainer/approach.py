@@ -27,9 +27,9 @@ _MOST_STEPS = 15
 
 def sample_size(objective: Objective) -> int:
     """Rows of the sample to fit first; 0 where starting with all rows is as fast."""
-    rows, width = objective.columns.shape
-    wanted = max(_SAMPLE_ROWS_A_WEIGHT * (width + 1), rows // _SAMPLE_SHARE)
-    return wanted if rows * width >= _LEAST_ENTRIES and rows >= 4 * wanted else 0
+    size, rows = len(objective.means), len(objective.sides)
+    wanted = max(_SAMPLE_ROWS_A_WEIGHT * size, rows // _SAMPLE_SHARE)
+    return wanted if rows * (size - 1) >= _LEAST_ENTRIES and rows >= 4 * wanted else 0
 
 
 def sample(objective: Objective, size: int) -> Objective:
@@ -55,32 +55,32 @@ def sample(objective: Objective, size: int) -> Objective:
             weights.append(own[drawn] * (own[light].sum() / own[drawn].sum()))
     chosen = np.concatenate(parts)
     return objective._replace(
-        columns=objective.columns[chosen], sides=objective.sides[chosen], row_weights=np.concatenate(weights)
+        design=objective.design.T[chosen].T, sides=objective.sides[chosen], row_weights=np.concatenate(weights)
     )
 
 
 def approach(objective: Objective, theta: Array, metric: Solve, settled: float, block_rows: int) -> tuple[Array, Array]:
-    """Steps until one changes no log-odds by more than `settled`, or until steps stop paying; θ and its log-odds.
+    """Steps until one changes no log-odds by more than `settled`, or until steps stop paying; θ and its t.
 
     metric: g -> H⁻¹ g for a Hessian like that of the optimum.
     """
-    slope, z = gradient(objective, theta, block_rows=block_rows)
+    slope, t = gradient(objective, theta, block_rows=block_rows)
     size = float(slope @ metric(slope))
     pairs: list[tuple[Array, Array, float]] = []
     for _ in range(_MOST_STEPS):
         step = -_two_loops(slope, metric, pairs)
         reached = theta + step
-        reached_slope, reached_z = gradient(objective, reached, block_rows=block_rows)
+        reached_slope, reached_t = gradient(objective, reached, block_rows=block_rows)
         reached_size = float(reached_slope @ metric(reached_slope))
         if not reached_size <= _LEAST_GAIN**2 * size:
             break
-        change = float(np.abs(reached_z - z).max())
+        change = float(np.abs(reached_t - t).max())
         bend = reached_slope - slope
         pairs.append((step, bend, float(step @ bend)))
-        theta, z, slope, size = reached, reached_z, reached_slope, reached_size
+        theta, t, slope, size = reached, reached_t, reached_slope, reached_size
         if change <= settled:
             break
-    return theta, z
+    return theta, t
 
 
 def _two_loops(slope: Array, metric: Solve, pairs: list[tuple[Array, Array, float]]) -> Array:

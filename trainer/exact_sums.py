@@ -2,7 +2,7 @@
 
 Three strengths, cheapest first:
 
-* `tree_sum` adds in a fixed tree of blocks of 8, so that a term passes few additions and the bound is small;
+* `tree_sum` adds in a fixed tree of blocks of 16, so that a term passes few additions and the bound is small;
 * `pair_sum` adds pairs (high, low) of doubles; the low part holds what the high part rounds away;
 * `exact_moments` adds whole numbers and forgets nothing.
 
@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 Array = NDArray[np.float64]
 
 UNIT_ROUNDOFF = 2.0**-53
-TREE_BLOCK = 8  # rows that one level of the tree adds; a term passes 7 additions a level
+TREE_BLOCK = 16  # rows that one level of the tree adds; a term passes 15 additions a level
 _SPLITTER = 2.0**27 + 1.0  # Veltkamp's constant for 53 bits
 
 
@@ -32,23 +32,30 @@ class Pairs(NamedTuple):
     low: Array
 
 
-def tree_sum(terms: Array) -> Array:
-    """Sum over the first axis, whose length is a power of two; any 8 partial sums of a level are added together.
+def tree_sum(terms: Array, axis: int = 0) -> Array:
+    """Sum over an axis whose length is a power of two; any 16 partial sums of a level are added together.
 
-    Each term passes at most 7 additions a level, so the error is at most γ(7·levels) Σ|terms|, γ(k) = k u / (1 − k u)
+    Each term passes `tree_additions`, k, at most, so the error is at most γ(k) Σ|terms|, γ(k) = k u / (1 − k u)
     (Higham, Accuracy and Stability of Numerical Algorithms, 2nd ed., section 4.2). The order within a block is free.
     """
-    while len(terms) > 1:
-        block = min(TREE_BLOCK, len(terms))
-        terms = terms.reshape(block, len(terms) // block, *terms.shape[1:]).sum(axis=0)
-    total: Array = terms[0]
-    return total
+    before, after = terms.shape[:axis], terms.shape[axis + 1 :]
+    for block in _tree_blocks(terms.shape[axis]):
+        terms = terms.reshape(*before, block, -1).sum(axis=axis)
+    return terms.reshape(before + after)
 
 
 def tree_additions(length: int) -> int:
     """Additions that a term passes, at most, in `tree_sum` over `length` terms (a power of two)."""
-    levels = -(-(length.bit_length() - 1) // 3)
-    return levels * (TREE_BLOCK - 1)
+    return sum(block - 1 for block in _tree_blocks(length))
+
+
+def _tree_blocks(length: int) -> list[int]:
+    """Partial sums in a block, level by level."""
+    blocks = []
+    while length > 1:
+        blocks.append(min(TREE_BLOCK, length))
+        length //= blocks[-1]
+    return blocks
 
 
 def power_of_two_above(count: int) -> int:

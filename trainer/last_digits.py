@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from trainer.exact_sums import UNIT_ROUNDOFF
 from trainer.grid import WEIGHT_STEP
-from trainer.objective import Checked, Objective, checked_gradient, gradient_along, gradient_in_pairs
+from trainer.objective import Checked, Objective, checked_gradient, gradient, gradient_along, gradient_in_pairs
 
 Array = NDArray[np.float64]
 
@@ -31,26 +31,36 @@ def to_grid(
 ) -> tuple[Array, Checked]:
     """θ on the grid and the gradient there; covariance (d + 1, d + 1); curvature (d + 1,), the Hessian's diagonal.
 
-    `offset` is one more Newton step, from the rounded weights; the largest change in posterior sd stands for all
-    weights, so that none passes by a lucky sample. `of_rows` is what rounding in single rows does to a step: some
-    u (Σ_k |C_jk| h_k + sd_j Σ|θ|), h_k² = H_kk being about the sum of the squared slopes times entries. Ties, should
-    there be any, go to the even multiple.
+    `offset` is one more Newton step, from the rounded weights. `of_rows` is what rounding in single rows does to a
+    step: some u (Σ_k |C_jk| h_k + sd_j Σ|θ|), h_k² = H_kk being about the sum of the squared slopes times entries.
+    Ties, should there be any, go to the even multiple.
     """
-    sds = np.sqrt(np.diagonal(covariance))
-    of_rows = np.abs(covariance) @ np.sqrt(curvature) + sds * np.abs(theta).sum()
+    sds = np.sqrt(covariance.diagonal())
+    of_rows = np.abs(covariance) @ np.sqrt(curvature) + sds * float(np.abs(theta).sum())
+    least_doubt = np.maximum(_DOUBT_OF_DOUBLES * of_rows, _LEAST_DOUBT)
     rounded = np.rint(theta / WEIGHT_STEP) * WEIGHT_STEP
     checked = checked_gradient(objective, rounded, block_rows=block_rows)
     offset = -(covariance @ checked.slope)
-    change = np.abs(rounded + offset - theta)
-    doubt = np.maximum(_DOUBT_PER_CHANGE * sds * (change / sds).max(), _LEAST_DOUBT)
-    doubt = np.maximum(doubt, _DOUBT_OF_DOUBLES * of_rows)
-    undecided = np.abs(offset) + doubt >= 0.5 * WEIGHT_STEP
+    undecided = np.abs(offset) + _doubt(rounded + offset - theta, sds, least_doubt) >= 0.5 * WEIGHT_STEP
     if not undecided.any():
         return rounded, checked
-    final = _round_in_pairs(objective, rounded + offset, covariance, of_rows, undecided, block_rows)
+    # A gradient in doubles is cheap beside one in pairs: perhaps θ was not settled to its last digits.
+    theta = rounded + offset
+    step = -(covariance @ gradient(objective, theta, block_rows=block_rows)[0])
+    final = _nearest(theta, step)
+    undecided = _from_midpoint(theta, step) <= _doubt(step, sds, least_doubt)
+    if undecided.any():
+        final = _round_in_pairs(objective, theta + step, covariance, of_rows, undecided, block_rows)
     if (final != rounded).any():
         checked = checked_gradient(objective, final, block_rows=block_rows)
     return final, checked
+
+
+def _doubt(change: Array, sds: Array, least: Array) -> Array:
+    """What is doubted of each weight: the largest change in posterior sd stands for all, so that none passes by a lucky
+    sample."""
+    doubt: Array = np.maximum(sds * (_DOUBT_PER_CHANGE * float(np.abs(change / sds).max())), least)
+    return doubt
 
 
 def _round_in_pairs(

@@ -6,8 +6,9 @@ Step rule. Along a step the second derivative φ″ changes by at most the facto
 log-odds (Bach, Electronic Journal of Statistics 4 (2010), section 2). So a Newton step with R <= 1 always descends:
 φ(1) − φ(0) <= −φ″(0) (1 − (e^R − 1 − R)/R²). It is taken whole. Any other step is shortened or stretched until the
 slope along it lies between minus half of what it was and zero, which for a convex function is descent with the
-curvature condition of Wolfe. The search needs no further reading of the columns. A start that is no better than zero
-gives way to zero, where every row has its full curvature: far out all of them can vanish in binary64.
+curvature condition of Wolfe; a few trials take it close to the end of the descent, since a long step far from the
+optimum points well but ends short. The search needs no further reading of the columns. A start that is no better than
+zero gives way to zero, where every row has its full curvature: far out all of them can vanish in binary64.
 
 Last digits: `last_digits` rounds the weights so that row order, threads and libraries do not show.
 """
@@ -27,6 +28,7 @@ from threadpoolctl import ThreadpoolController
 
 from runtime_min.errors import FitError, Problem
 from trainer.approach import Solve, approach, sample, sample_size
+from trainer.exact_sums import UNIT_ROUNDOFF
 from trainer.last_digits import to_grid
 from trainer.objective import (
     BLOCK_ROWS,
@@ -34,8 +36,8 @@ from trainer.objective import (
     Objective,
     Prior,
     gradient_and_hessian,
-    log_odds,
     objective_of,
+    sided_log_odds,
     slopes,
     value,
 )
@@ -43,14 +45,20 @@ from trainer.objective import (
 Array = NDArray[np.float64]
 
 _WHOLE_STEP = 1.0  # R up to which a Newton step is taken whole
-_SETTLED = 1e-9  # R after which the Hessian at hand is the optimum's to less than this relative error
+_SETTLED = 1e-7  # R after which the Hessian at hand is the optimum's to less than this relative error
 _SETTLED_MANY = 1e-5  # the same for many rows, where one more Hessian costs a quarter of the fit
 _APPROACHED = 3e-5  # R of an approaching step after which one Newton step settles
 _SAMPLE_SETTLED = 0.1  # the optimum of a sample is farther than that from the optimum of all rows
 _MOST_STEPS = 200
+_ROUNDINGS_OF_LOG_ODDS = 4.0
 _LEAST_PIVOT = 1e-13  # of the scaled Hessian, whose entries carry errors of some 1e-15
 
-_threads = ThreadpoolController()  # made once: looking the libraries up takes longer than a small fit
+_STRETCH = 1.25  # first trial of a search: from zero, where curvature is largest, a Newton step always ends short
+_CLOSE, _CLOSE_TRIALS = 0.004, 4  # a search tries so often to leave no more than this share of the slope
+_SPLITTING_TRIALS = 8  # trials of a search after which only halving is trusted
+
+# Made once: looking the libraries up takes longer than a small fit.
+_blas = [library for library in ThreadpoolController().lib_controllers if library.user_api == "blas"]
 
 
 @dataclass(frozen=True)
@@ -83,9 +91,12 @@ class _Factor(NamedTuple):
         return result
 
     def inverse(self) -> Array:
-        half, _ = lapack.dpotri(self.lower, lower=1)
-        full = np.tril(half) + np.tril(half, -1).T
-        result: Array = full * self.scaling * self.scaling[:, np.newaxis]
+        half, _ = lapack.dpotri(self.lower, lower=1)  # the upper triangle stays 0
+        half.flat[:: len(half) + 1] *= 0.5
+        full = half + half.T
+        full *= self.scaling
+        full *= self.scaling[:, np.newaxis]
+        result: Array = full
         return result
 
 
@@ -105,13 +116,13 @@ def solve(
     """
     objective = objective_of(columns, labels, row_weights, prior)
     with one_thread():
-        theta, z, settled = _better_start(objective, start), None, _SETTLED
+        theta, t, settled = _better_start(objective, start), None, _SETTLED
         if size := sample_size(objective):
             near = _newton(sample(objective, size), theta, None, _SAMPLE_SETTLED, block_rows)
             settled = _SETTLED_MANY
             if near is not None:
-                theta, z = approach(objective, near[0], near[1].solve, _APPROACHED, block_rows)
-        found = _newton(objective, theta, z, settled, block_rows)
+                theta, t = approach(objective, near[0], near[1].solve, _APPROACHED, block_rows)
+        found = _newton(objective, theta, t, settled, block_rows)
         if found is None:
             raise FitError(
                 Problem(
@@ -138,8 +149,16 @@ def near_optimum(objective: Objective, start: Array, settled: float) -> tuple[Ar
 @contextmanager
 def one_thread() -> Iterator[None]:
     """BLAS on one thread, which small products need, and no warnings of numbers that overflow on the way."""
-    with _threads.limit(limits=1, user_api="blas"), np.errstate(all="ignore"):
-        yield
+    before = [(library, library.get_num_threads()) for library in _blas]
+    changed = [(library, threads) for library, threads in before if threads != 1]
+    for library, _ in changed:
+        library.set_num_threads(1)
+    try:
+        with np.errstate(all="ignore"):
+            yield
+    finally:
+        for library, threads in changed:
+            library.set_num_threads(threads)
 
 
 def _better_start(objective: Objective, start: Array | None) -> Array:
@@ -151,62 +170,80 @@ def _better_start(objective: Objective, start: Array | None) -> Array:
 
 
 def _newton(
-    objective: Objective, theta: Array, z: Array | None, settled: float, block_rows: int
+    objective: Objective, theta: Array, t: Array | None, settled: float, block_rows: int
 ) -> tuple[Array, _Factor] | None:
-    """Newton steps from any start until one changes no log-odds by more than `settled`; z are the log-odds of θ.
+    """Newton steps from any start until one changes no log-odds by more than `settled`; t is that of θ.
 
     None where the curvature vanishes along some weights, or nothing is settled after `_MOST_STEPS`.
     """
-    if z is None:
-        z = log_odds(objective.columns, theta)
+    if t is None:
+        t = sided_log_odds(objective, theta)
     for _ in range(_MOST_STEPS):
-        slope, hessian = gradient_and_hessian(objective, theta, z, block_rows=block_rows)
+        slope, hessian = gradient_and_hessian(objective, theta, t, block_rows=block_rows)
         factor = _factor(hessian)
         if factor is None:
             return None
         step = -factor.solve(slope)
-        reached = log_odds(objective.columns, theta + step)
-        along = reached - z
+        reached = sided_log_odds(objective, theta + step)
+        along = reached - t
         change = float(np.abs(along).max())
         if not math.isfinite(change):
             return None
         if change <= _WHOLE_STEP:
-            theta, z = theta + step, reached
+            theta, t = theta + step, reached
             if change <= settled:
                 return theta, factor
         else:
-            theta = theta + _search(objective, theta, step, z, along) * step
-            z = log_odds(objective.columns, theta)
+            length = _search(objective, theta, step, t, along, float(slope @ step))
+            if length is None:
+                return None
+            theta = theta + length * step
+            t = sided_log_odds(objective, theta)
     return None
 
 
-def _search(objective: Objective, theta: Array, step: Array, z: Array, along: Array) -> float:
-    """A length t with −½|φ'(0)| <= φ'(t) <= 0, φ the negative log posterior along the step; φ' only rises."""
+def _search(objective: Objective, theta: Array, step: Array, t: Array, along: Array, first: float) -> float | None:
+    """A length l with −½|φ'(0)| <= φ'(l) <= 0, φ the negative log posterior along the step; φ' only rises.
 
-    def slope_at(length: float) -> float:
-        by_row, _ = slopes(z + length * along, objective.sides, objective.row_weights)
-        by_prior = (theta + length * step - objective.means) * objective.precisions
-        return float(by_row @ along + by_prior @ step)
+    None where there seems to be none, because φ falls for ever. first: φ'(0).
 
-    first = slope_at(0.0)
-    low, high = 0.0, math.inf
-    length = 1.0
-    for _ in range(100):
-        slope = slope_at(length)
+    Newton's method for φ'(l) = −½ `_CLOSE` |φ'(0)|, with the curvature half a step ahead as its change so far foretells
+    it, finds one where φ' is close to 0 in two or three trials.
+    """
+    squares = along * along
+    prior_slope = float(((theta - objective.means) * objective.precisions) @ step)
+    prior_bend = float((step * step) @ objective.precisions)
+    low, high, enough = 0.0, math.inf, False
+    last, last_bend = 0.0, -first  # of a Newton step, φ''(0) = −φ'(0)
+    length = _STRETCH
+    for trial in range(1, 100):
+        by_row, curvature = slopes(t + length * along, objective.row_weights)
+        slope = float(by_row @ along) + prior_slope + length * prior_bend
+        bend = float(curvature @ squares) + prior_bend
         if slope > 0.0:
             high = length
-        elif slope < 0.5 * first:
-            low = length
         else:
-            return length
-        length = 2.0 * length if high == math.inf else 0.5 * (low + high)
-    return low
+            low, enough = length, slope >= 0.5 * first
+            if slope >= _CLOSE * first or (enough and trial >= _CLOSE_TRIALS):
+                break
+        left = 0.5 * _CLOSE * first - slope
+        ahead = left / bend if bend > 0.0 else math.inf
+        bend_ahead = bend + 0.5 * ahead * (bend - last_bend) / (length - last)
+        last, last_bend = length, bend
+        ahead = length + (left / bend_ahead if bend_ahead > 0.0 else ahead)
+        if trial < _SPLITTING_TRIALS and low < ahead < min(high, 4.0 * length):
+            length = ahead
+        else:
+            length = 2.0 * length if high == math.inf else 0.5 * (low + high)
+    return low if enough else None
 
 
 def _factor(hessian: Array) -> _Factor | None:
     """The factor, or None where rounding has eaten what one weight adds to the others."""
     scaling = 1.0 / np.sqrt(hessian.diagonal())  # NaN or infinite where there is no curvature: then `failed`
-    lower, failed = lapack.dpotrf(hessian * scaling * scaling[:, np.newaxis], lower=1)
+    scaled = hessian * scaling
+    scaled *= scaling[:, np.newaxis]
+    lower, failed = lapack.dpotrf(scaled.T, lower=1, overwrite_a=1)
     if failed or not float(lower.diagonal().min()) ** 2 > _LEAST_PIVOT:
         return None
     return _Factor(lower, scaling)
@@ -218,19 +255,21 @@ def _certified(theta: Array, checked: Checked, covariance: Array) -> Solution:
     With e the distance to the optimum, λ the decrement and t the largest change of a log-odds along e, the Hessians on
     the way differ from H by at most the factor exp(t). So |e|_H <= e^t λ and |e − H⁻¹g|_H <= (e^t − 1) λ, where
     t <= ρ |e|_H, ρ = Σ_j sd_j max|x_j|; for a = ρ λ <= 0.2 the fixed point t = a e^t lies below 1.3 a. A component in
-    posterior sd is never more than the H-norm.
+    posterior sd is never more than the H-norm. A row's log-odds are rounded by some u Σ|θ|; in posterior sd that moves
+    the step by about as much, since Σ ω v (x · C e_j)² <= C_jj.
     """
     step = covariance @ checked.slope
     decrement = math.sqrt(max(float(checked.slope @ step), 0.0))
-    sds = np.sqrt(np.diagonal(covariance))
+    sds = np.sqrt(covariance.diagonal())
     reach = float(sds @ checked.largest) * decrement
     beyond = math.expm1(1.3 * reach) * decrement if reach <= 0.2 else math.inf
-    relative = np.abs(checked.slope) / np.where(checked.sizes > 0, checked.sizes, 1.0)
+    beyond += _ROUNDINGS_OF_LOG_ODDS * UNIT_ROUNDOFF * float(np.abs(theta).sum())
+    sizes = np.where(checked.sizes > 0, checked.sizes, 1.0)
     return Solution(
         intercept=float(theta[0]) + 0.0,
         weights=tuple((theta[1:] + 0.0).tolist()),
         covariance=tuple(map(tuple, covariance.tolist())),
-        gradient=float(relative.max()),
+        gradient=float(np.abs(checked.slope / sizes).max()),
         newton_decrement=decrement,
         distance=float((np.abs(step) / sds).max()) + beyond,
     )

@@ -32,13 +32,16 @@ from trainer.exact_sums import (
     two_sum,
 )
 from trainer.grid import SCALE_BITS, round_centre, round_scale
+from trainer.objective import WIDE
 
 Array = NDArray[np.float64]
 Labels = NDArray[np.integer]
 Bools = NDArray[np.bool_]
 
 _BLOCK_ROWS = 2048  # rows that are centred and summed while they are in the cache; a power of two
-_PIVOT_ROWS = 256  # rows whose mean serves as pivot; any choice gives the same result
+_PIVOT_ROWS = 32  # rows whose mean serves as pivot; any choice gives the same result
+_MIDDLE_MULTIPLE = 0.75 * 2.0**SCALE_BITS  # of those that a scale can be of its last bit
+_BOTH_WAYS = np.array(((-2.0,), (2.0,)))
 _LEAST_VARIANCE = 2.0**-700  # above it no underflow in a square reaches the error bound
 _WEIGHT_LIMITS = (2.0**-100, 2.0**100)  # row weights within these keep products clear of under- and overflow
 _PAIR_ERROR = Fraction(1, 2**90)  # above 8 u² (40 levels) + 6 u², u = 2^-53: a sum in pairs, relative to Σ|terms|
@@ -61,13 +64,15 @@ def standardise(
     Finite values and at least one positive weight are required; `judge` says so in words. A constant column gets
     scale 1 and becomes 0; `judge` refuses it. `block_rows` is a power of two and changes no bit.
     """
-    values = np.ascontiguousarray(values, dtype=np.float64)
+    values = np.asarray(values, dtype=np.float64, order="C")
     to_scale = np.asarray(numeric, dtype=bool)
-    centres, scales = np.zeros(values.shape[1]), np.ones(values.shape[1])
-    if to_scale.any():
-        chosen = values if to_scale.all() else np.ascontiguousarray(values[:, to_scale])
-        centres[to_scale], scales[to_scale] = _centres_and_scales(chosen, row_weights, block_rows)
-    return Standardised(tuple(centres.tolist()), tuple(scales.tolist()), _columns(values, centres, scales, block_rows))
+    if to_scale.all():
+        centres, scales = _centres_and_scales(values, row_weights, block_rows)
+    else:
+        centres, scales = np.zeros(len(to_scale)), np.ones(len(to_scale))
+        if to_scale.any():
+            centres[to_scale], scales[to_scale] = _centres_and_scales(values[:, to_scale], row_weights, block_rows)
+    return Standardised(tuple(centres.tolist()), tuple(scales.tolist()), _columns(values, centres, scales))
 
 
 def class_sums(labels: Labels, row_weights: Array | None, classes: int) -> tuple[float, ...]:
@@ -77,13 +82,18 @@ def class_sums(labels: Labels, row_weights: Array | None, classes: int) -> tuple
     return tuple(math.fsum(row_weights[labels == index].tolist()) for index in range(classes))
 
 
-def _columns(values: Array, centres: Array, scales: Array, block_rows: int) -> Array:
-    rows = min(block_rows, len(values))
+def _columns(values: Array, centres: Array, scales: Array) -> Array:
+    """Laid out as the fit reads them: the numbers of a column side by side where there are few columns."""
+    if len(centres) < WIDE:
+        by_column = np.subtract(values.T, centres[:, np.newaxis], order="C")
+        by_column /= scales[:, np.newaxis]
+        return by_column.T
+    columns = np.empty_like(values, order="C")
+    rows = min(_BLOCK_ROWS, len(values))
     tiled_centres, tiled_scales = np.tile(centres, (rows, 1)), np.tile(scales, (rows, 1))  # one long loop, not n short
-    columns = np.empty_like(values)
-    for start in range(0, len(values), block_rows):
-        block = columns[start : start + block_rows]
-        np.subtract(values[start : start + block_rows], tiled_centres[: len(block)], out=block)
+    for start in range(0, len(values), _BLOCK_ROWS):
+        block = columns[start : start + _BLOCK_ROWS]
+        np.subtract(values[start : start + _BLOCK_ROWS], tiled_centres[: len(block)], out=block)
         np.divide(block, tiled_scales[: len(block)], out=block)
     return columns
 
@@ -106,62 +116,68 @@ def _in_doubles(values: Array, row_weights: Array | None, block_rows: int) -> tu
     With γ = γ(k), k roundings on a term's way, and ρ² = Σω d² / Σω: the shift Σω d / Σω is known within γ ρ, since
     Σω|d| <= ρ Σω (Cauchy and Schwarz), and the variance within γ (ρ + |shift|)².
     """
-    pivot = values[:: max(1, len(values) // _PIVOT_ROWS)].mean(axis=0)
-    first, second, additions = _sums_about(pivot, values, row_weights, block_rows)
-    total = float(len(values)) if row_weights is None else math.fsum(row_weights.tolist())
-    shift, square = first / total, second / total
+    some = values[:: max(1, len(values) // _PIVOT_ROWS)]
+    pivot = some.sum(axis=0) / len(some)
+    sums, additions = _sums_about(pivot, values, row_weights, block_rows)
+    sums /= float(len(values)) if row_weights is None else math.fsum(row_weights.tolist())
+    shift, square = sums
     roundings = (additions + 8) * UNIT_ROUNDOFF
     gamma = 1.01 * roundings / (1.0 - roundings)
     spread = np.sqrt(square)
     variance = square - shift * shift
     scale = np.sqrt(variance)
-    scale_error = gamma * (spread + np.abs(shift)) ** 2 / variance + 4.0 * UNIT_ROUNDOFF  # relative
+    reach = spread + np.abs(shift)
+    scale_error = gamma * (reach * reach / variance) + 4.0 * UNIT_ROUNDOFF  # relative
 
     mantissa, exponent = np.frexp(scale)
+    exponent -= SCALE_BITS
     multiple = np.ldexp(mantissa, SCALE_BITS)
     nearest = np.rint(multiple)
     doubt = multiple * scale_error
     sure = np.abs(multiple - nearest) + doubt < 0.5
-    sure &= (multiple - doubt >= 2.0 ** (SCALE_BITS - 1)) & (multiple + doubt < 2.0**SCALE_BITS)
+    sure &= np.abs(multiple - _MIDDLE_MULTIPLE) + doubt < _MIDDLE_MULTIPLE - 2.0 ** (SCALE_BITS - 1)
     sure &= variance >= _LEAST_VARIANCE
-    sure &= _tame(row_weights)
 
-    last_bit = np.ldexp(1.0, exponent - SCALE_BITS)
+    last_bit = np.ldexp(1.0, exponent)
     mean, mean_rest = two_sum(pivot, shift)
     mean_error = gamma * spread
-    step = np.maximum(last_bit, np.spacing(np.abs(mean)))
-    sure &= step == np.maximum(last_bit, np.spacing(np.maximum(np.abs(mean) - 2.0 * mean_error, 0.0)))
-    sure &= step == np.maximum(last_bit, np.spacing(np.abs(mean) + 2.0 * mean_error))
-    whole = np.rint(mean / step)
-    rest = (mean / step - whole) + mean_rest / step
-    sure &= np.abs(rest - np.rint(rest)) + mean_error / step + 2.0**-40 < 0.5
-    return (whole + np.rint(rest)) * step + 0.0, np.ldexp(nearest, exponent - SCALE_BITS), sure
+    ends = np.abs(np.abs(mean) + _BOTH_WAYS * mean_error)  # where the lower one is beyond 0, its step is not larger
+    steps = np.maximum(np.spacing(ends), last_bit)
+    sure &= steps[0] == steps[1]
+    step = steps[1]
+    multiple, rest = mean / step, mean_rest / step
+    whole = np.rint(multiple)
+    rest += multiple - whole
+    over = np.rint(rest)
+    sure &= np.abs(rest - over) + mean_error / step + 2.0**-40 < 0.5
+    if not _tame(row_weights):
+        sure[:] = False
+    return (whole + over) * step + 0.0, np.ldexp(nearest, exponent), sure
 
 
-def _sums_about(pivot: Array, values: Array, row_weights: Array | None, block_rows: int) -> tuple[Array, Array, int]:
-    """Σω d and Σω d² of each column, d = v − pivot, in a fixed tree; and the additions on a term's way."""
+def _sums_about(pivot: Array, values: Array, row_weights: Array | None, block_rows: int) -> tuple[Array, int]:
+    """Σω d and Σω d² of each column, d = v − pivot, in a fixed tree, (2, d); and the additions on a term's way."""
     rows, width = values.shape
     block_rows = min(block_rows, power_of_two_above(rows))
     blocks = -(-rows // block_rows)
-    firsts, seconds = (np.zeros((power_of_two_above(blocks), width)) for _ in range(2))
-    deviations, squares = np.zeros((block_rows, width)), np.zeros((block_rows, width))
-    pivots = np.tile(pivot, (block_rows, 1))
+    sums = np.zeros((2, power_of_two_above(blocks), width))
+    room = np.empty((2, block_rows, width))
+    first, second = room
+    pivots = np.tile(pivot, (block_rows, 1))  # one long loop, not many short ones
     for index in range(blocks):
-        start = index * block_rows
-        block = values[start : start + block_rows]
-        deviations[len(block) :] = 0.0
-        np.subtract(block, pivots[: len(block)], out=deviations[: len(block)])
+        block = values[index * block_rows : (index + 1) * block_rows]
+        used = len(block)
+        room[:, used:] = 0.0
         if row_weights is None:
-            np.multiply(deviations, deviations, out=squares)
-            firsts[index] = tree_sum(deviations)
+            np.subtract(block, pivots[:used], out=first[:used])
+            np.multiply(first, first, out=second)
         else:
-            weights = row_weights[start : start + block_rows, np.newaxis]
-            np.multiply(deviations[: len(block)], weights, out=squares[: len(block)])
-            squares[len(block) :] = 0.0
-            firsts[index] = tree_sum(squares)
-            np.multiply(squares, deviations, out=squares)
-        seconds[index] = tree_sum(squares)
-    return tree_sum(firsts), tree_sum(seconds), tree_additions(block_rows) + tree_additions(len(firsts))
+            weights = row_weights[index * block_rows : index * block_rows + used, np.newaxis]
+            np.subtract(block, pivots[:used], out=second[:used])
+            np.multiply(second[:used], weights, out=first[:used])
+            second *= first
+        sums[:, index] = tree_sum(room, axis=1)
+    return tree_sum(sums, axis=1), tree_additions(block_rows) + tree_additions(sums.shape[1])
 
 
 def _in_pairs(values: Array, row_weights: Array | None) -> tuple[float, float] | None:
@@ -172,7 +188,8 @@ def _in_pairs(values: Array, row_weights: Array | None) -> tuple[float, float] |
     if row_weights is not None:
         terms, squares = scale_pairs(terms, row_weights), scale_pairs(squares, row_weights)
         total = _fraction(pair_sum(Pairs(row_weights, np.zeros_like(row_weights))))
-    sums = pair_sum(terms), pair_sum(squares)
+    both = pair_sum(Pairs(np.column_stack((terms.high, squares.high)), np.column_stack((terms.low, squares.low))))
+    sums = [Pairs(both.high[index], both.low[index]) for index in (0, 1)]
     if not _tame(row_weights) or not all(
         math.isfinite(part) for pair in sums for part in (float(pair.high), float(pair.low))
     ):
