@@ -55,7 +55,7 @@ def integer_context(sealed: SealedModel, self_test: SelfTest) -> dict[str, objec
         "width": max(len(f"{sealed.name}_IN_{name},") for name in names),
         "columns": columns,
         "column_words": lexical.comment_lines(f"Of each input: {listed}."),
-        "enumerators": lexical.wrapped([f"{prefix}_{name.upper()}" for name in (*columns, "columns")], "    ", "    "),
+        "enumerators": lexical.wrapped([f"{prefix}_{name.upper()}" for name in columns], "    ", "    "),
         "rows": _rows(sealed, columns, names),
         "any_clamp": any(entry.outside == "clamp" for entry in sealed.inputs),
         "guard_missing": any(entry.outside == "clamp" and entry.typical is None for entry in sealed.inputs),
