@@ -235,6 +235,7 @@ def test_graph_is_valid_standard_onnx(name: str) -> None:
     assert not used & {"MatMul", "Gemm", "Exp", "Sigmoid", "Softmax", "Pow", "ReduceSum", "Sum", "Clip"}
     names = [output for node in model.graph.node for output in node.output]
     assert len(set(names)) == len(names)
+    assert {tensor.name for tensor in model.graph.initializer} <= {x for node in model.graph.node for x in node.input}
     assert not model.functions
 
 

@@ -21,12 +21,12 @@ from runtime_min.model import Input, SealedModel, Term
 
 def add_integers(graph: Graph, sealed: SealedModel) -> tuple[str, str]:
     """Log-odds and probability; the names of the sum, and of where a row has no fault."""
-    graph.number("missing", missing_count(sealed))
     graph.number("zero", 0)
     counts = "inputs"
     if graph.kind != TensorProto.INT32:
         counts = graph.node("counts", "Cast", "inputs", to=graph.kind)
-    values = [_input(graph, counts, position, entry) for position, entry in enumerate(sealed.inputs)]
+    missing = missing_count(sealed)
+    values = [_input(graph, counts, position, entry, missing) for position, entry in enumerate(sealed.inputs)]
     valid = graph.node("valid", "Not", graph.any([fault for _, fault in values if fault], "any_fault"))
     z = graph.number("intercept", sealed.intercepts[0])
     for entry, term, (value, _) in zip(sealed.inputs, sealed.terms, values, strict=True):
@@ -37,16 +37,16 @@ def add_integers(graph: Graph, sealed: SealedModel) -> tuple[str, str]:
     return z, valid
 
 
-def _input(graph: Graph, counts: str, position: int, entry: Input) -> tuple[str, str]:
+def _input(graph: Graph, counts: str, position: int, entry: Input, missing: int) -> tuple[str, str]:
     """One column after its policies, and where it is a fault (empty where it never is): there it is the lowest."""
     name = prefix(entry)
     x = graph.node(f"{name}.given", "Gather", counts, graph.integer(f"{name}.position", position), axis=1)
     faults = []
     if entry.typical is not None:
-        missing = graph.node(f"{name}.missing", "Equal", x, "missing")
-        x = graph.node(f"{name}.present", "Where", missing, graph.number(f"{name}.typical", entry.typical), x)
+        is_missing = graph.node(f"{name}.missing", "Equal", x, graph.number("missing", missing))
+        x = graph.node(f"{name}.present", "Where", is_missing, graph.number(f"{name}.typical", entry.typical), x)
     elif entry.outside == "clamp":  # elsewhere what is missing lies below the range
-        faults.append(graph.node(f"{name}.missing", "Equal", x, "missing"))
+        faults.append(graph.node(f"{name}.missing", "Equal", x, graph.number("missing", missing)))
     low, high = graph.number(f"{name}.low", entry.low), graph.number(f"{name}.high", entry.high)
     below = graph.node(f"{name}.below", "Less", x, low)
     above = graph.node(f"{name}.above", "Greater", x, high)
