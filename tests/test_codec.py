@@ -714,7 +714,7 @@ def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(
     small = dataclasses.replace(trained, witness=trained.witness[:1], held_out=TRAINED.held_out)
     data = json.loads(sealed_text(sealed) if kind == "sealed" else trained_text(small))
     validator = jsonschema.Draft202012Validator(SCHEMAS[kind])
-    refused = 0
+    tried = refused = seen = 0
     for place in _leaves(data):
         if place[:2] == ("trained", "covariance") and place[2:3] > (0,):
             continue  # alike, row by row
@@ -723,11 +723,15 @@ def test_loading_refuses_whatever_the_schema_refuses_and_never_fails_otherwise(
             inner = inner[step]
         for replacement in REPLACEMENTS:
             other = damaged(data, place, replacement(inner))
-            found = problems_of(tmp_path, kind, json.dumps(other))
-            if not validator.is_valid(other):
-                refused += 1
-                assert found, (place, replacement(inner))
-    assert refused > 500
+            tried += 1
+            if not problems_of(tmp_path, kind, json.dumps(other)):
+                assert validator.is_valid(other), (place, replacement(inner))
+                continue
+            refused += 1
+            seen += refused % 20 == 0 and not validator.is_valid(other)
+    # Loading refuses most, but not all; of these the schema sees most (asked of every twentieth, since it is slow).
+    assert 500 < refused < tried
+    assert seen > refused / 40
 
 
 # --- integers --------------------------------------------------------------------------------------------------------
