@@ -12,6 +12,7 @@ import itertools
 import math
 import random
 from collections.abc import Iterator, Sequence
+from fractions import Fraction
 
 import numpy as np
 
@@ -71,10 +72,13 @@ def make_vectors(sealed: SealedModel, trained: TrainedModel | None = None) -> tu
 def self_test_of(sealed: SealedModel, vectors: Sequence[Vector]) -> SelfTest:
     """A few vectors of each kind, and the tables' CRC."""
     chosen: list[Vector] = []
+    seen: list[str | None] = []
     by_kind = [[v for v in vectors if v.kind == kind] for kind in ("random", "corner", "threshold", "policy")]
     for rank in range(SELF_TEST_ROWS):
         for group in by_kind:
-            if rank < len(group) and len(chosen) < SELF_TEST_ROWS:
+            row = repr(group[-1 - rank].inputs) if rank < len(group) else None  # as text: a NaN is no NaN's equal
+            if row not in (None, *seen) and len(chosen) < SELF_TEST_ROWS:
+                seen.append(row)
                 chosen.append(group[-1 - rank])
     return SelfTest(tuple(chosen), table_crc(sealed))
 
@@ -128,6 +132,8 @@ def _next_to_threshold(sealed: SealedModel, rng: random.Random) -> Iterator[Row]
         if len(found) < THRESHOLD_ROWS:
             found += pair
         exact += [row for row in pair if score.log_odds(sealed, row) == threshold]
+    if sealed.arithmetic in INTEGERS and len(numeric) > 1:
+        exact += [row for _ in range(ON_THRESHOLD_TRIES) if (row := _exactly_on(sealed, rng, numeric)) is not None]
     yield from found
     yield from exact[: THRESHOLD_ROWS // 4]
 
@@ -158,6 +164,34 @@ def _bracket(sealed: SealedModel, row: list[float], position: int, threshold: fl
         else:
             above = middle
     return at(below), at(above)
+
+
+def _exactly_on(sealed: SealedModel, rng: random.Random, numeric: Sequence[int]) -> Row | None:
+    """A random row, two of whose counts are moved so that the log-odds are a threshold exactly, where that can be.
+
+    With p and q the steps of the log-odds for one count of each, a p + c q = r is solved in whole numbers: a is known
+    modulo q / gcd(p, q), and both counts must stay within their limits.
+    """
+    row = [int(value) for value in random_row(sealed, rng)]
+    first, second = rng.sample(list(numeric), 2)
+    p, q = (int(sealed.terms[at].weights[0][0]) << (sealed.terms[at].shift or 0) for at in (first, second))
+    threshold = rng.choice([int(sealed.decision.low), int(sealed.decision.high)])
+    rest = threshold - int(score.log_odds(sealed, row))
+    common = math.gcd(p, q)
+    if not p or not q or rest % common:
+        return None
+    p, q, rest = p // common, q // common, rest // common
+    ends = [int(end) - row[second] for end in (sealed.inputs[second].low, sealed.inputs[second].high)]
+    bounds = sorted(Fraction(rest - end * q, p) for end in ends)
+    least = max(math.ceil(bounds[0]), int(sealed.inputs[first].low) - row[first])
+    most = min(math.floor(bounds[1]), int(sealed.inputs[first].high) - row[first])
+    start = rest * pow(p, -1, abs(q)) if abs(q) > 1 else 0
+    move = least + (start - least) % abs(q)
+    if move > most:
+        return None
+    row[first] += move
+    row[second] += (rest - move * p) // q
+    return tuple(row)
 
 
 def _policy_rows(sealed: SealedModel, rng: random.Random) -> Iterator[Row]:
