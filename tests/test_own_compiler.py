@@ -89,6 +89,11 @@ def test_compiler_that_is_not_there_counts_as_not_run(header: Path) -> None:
     )
 
 
+def test_header_that_is_not_there_ran_and_failed(tmp_path: Path) -> None:
+    run, _ = compile_own("gcc", tmp_path / "model.h", SEALED)
+    assert (run.ran, run.trouble) == (True, "the header cannot be read (No such file or directory)")
+
+
 def test_plan_with_a_compiler_ships_and_reports_the_size(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     if "gcc" not in HAVE:
         pytest.skip("gcc is not installed")

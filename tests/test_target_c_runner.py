@@ -78,6 +78,13 @@ def test_mistake_in_the_header_is_the_trouble_of_the_run(code: str, trouble: str
     assert run.outputs == ()
 
 
+def test_header_that_is_not_there_ran_and_failed(tmp_path: Path) -> None:
+    """A missing artefact is not a missing tool: nothing may accept it as one that did not run."""
+    for run in C.run(tmp_path / C.file(SEALED), SEALED, [(4.0,)], False):
+        assert run.ran
+        assert run.trouble == "the header cannot be read (No such file or directory)"
+
+
 def test_program_that_hangs_is_stopped(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     monkeypatch.setattr(runner, "RUN_SECONDS", 0.5)
     way = Way(compiler("gcc"), "c", ("-std=c99", "-O0"))

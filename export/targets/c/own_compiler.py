@@ -37,11 +37,15 @@ def compile_own(command: str, artefact: Path, sealed: SealedModel, seconds: floa
         return broken(f"the command cannot be read ({error}); close its quotes in the plan")
     if not words:
         return broken("the command is empty; write it in the plan, or leave compiler out")
+    try:
+        header = artefact.read_bytes()
+    except OSError as error:
+        return broken(f"the header cannot be read ({error.strerror or error})")
     prefix = sealed.name.upper()
     source = f'#define {prefix}_SEPARATE\n#define {prefix}_CODE_HERE\n#include "artefact.h"\n'
     with TemporaryDirectory(prefix="firmlogit-") as folder:
         place = Path(folder)
-        (place / "artefact.h").write_bytes(artefact.read_bytes())
+        (place / "artefact.h").write_bytes(header)
         (place / "code.c").write_text(source)
         options = ["-c", "code.c", "-o", "code.o"]
         done = run_program([*words, *options], seconds, folder=folder, environment={**os.environ, **PLAIN_WORDS})

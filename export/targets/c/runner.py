@@ -56,8 +56,12 @@ def run_one(way: Way, artefact: Path, sealed: SealedModel, text: str, row_count:
         return Run(way.what, True, trouble, None, None, ())
 
     try:
+        header = artefact.read_bytes()
+    except OSError as error:
+        return broken(f"the header cannot be read ({error.strerror or error})")
+    try:
         with TemporaryDirectory(prefix="firmlogit-") as folder:
-            sources = _write_sources(Path(folder), artefact, sealed, way.separate)
+            sources = _write_sources(Path(folder), header, sealed, way.separate)
             program = Path(folder) / "program"
             command = [*way.command, *map(str, sources), "-o", str(program)]
             done = run_program(command, way.compiler.seconds, folder=folder, environment={**os.environ, **PLAIN_WORDS})
@@ -95,8 +99,8 @@ def rows_as_bits(rows: Sequence[Sequence[float]], sealed: SealedModel) -> str:
     )
 
 
-def _write_sources(folder: Path, artefact: Path, sealed: SealedModel, separate: bool) -> list[Path]:
-    (folder / "artefact.h").write_bytes(artefact.read_bytes())
+def _write_sources(folder: Path, header: bytes, sealed: SealedModel, separate: bool) -> list[Path]:
+    (folder / "artefact.h").write_bytes(header)
     driver = folder / "driver.c"
     text = _driver(sealed)
     if not separate:
