@@ -1,7 +1,7 @@
 """The same bits on every part for 100,000 random rows a model, drawn on the part itself.
 
 Each program prints a running CRC-32 of all its answers. The host's program is held against the reference scorer, and
-every part against the host's. Too many rows for an emulator that counts cycles, so the ATmega328P runs under QEMU here.
+every part against the host's.
 """
 
 from __future__ import annotations
@@ -22,7 +22,7 @@ from runtime_min.sealing import seal_request
 
 ROWS = 100_000
 BLOCK = 5_000
-TOOLS = ("arm-none-eabi-gcc", "qemu-system-arm", "avr-gcc", "qemu-system-avr")
+TOOLS = ("arm-none-eabi-gcc", "qemu-system-arm", "avr-gcc", "qemu-system-avr", "simavr")
 PUMP = (SUCTION, FLOW, CURRENT, VIBRATION, WATER, IMPELLER)
 SETS = {
     "two": (VIBRATION, IMPELLER),

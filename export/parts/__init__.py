@@ -61,6 +61,12 @@ class Part:
         """The module that knows how this part's toolchain is called."""
         return cast(Family, import_module(f"export.parts.{self.family}"))
 
+    def compiler(self) -> str:
+        """The compiler with its version: "avr-gcc 5.4.0"."""
+        command = self.tools[0].command
+        done = subprocess.run([command, "-dumpversion"], capture_output=True, text=True, timeout=30, check=False)
+        return f"{command} {done.stdout.strip()}"
+
     def missing(self) -> str | None:
         """What is not installed and which packages have it, as a sentence; None where everything is there."""
         absent = [tool for tool in self.tools if tool.missing()]

@@ -45,7 +45,7 @@ def run_part(
         yield Run(where, False, missing, None, None, ())
         return
     for flags in (FLAGS, *MORE_FLAGS) if thorough else (FLAGS,):
-        what = f"{where}, {' '.join(flags)}"
+        what = f"{where}, {part.compiler()} {' '.join(flags)}"
         try:
             yield _run_way(part, header.read_bytes(), sealed, rows, flags, what)
         except TroubleError as trouble:
