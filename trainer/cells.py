@@ -33,13 +33,23 @@ class Block(NamedTuple):
     cells: Callable[[int], Cells]
 
 
+class Span(NamedTuple):
+    """All values of the device's counts, `low` to `high`; rows may go to `least` and `most`."""
+
+    low: Fraction
+    high: Fraction
+    least: float
+    most: float
+
+
 @dataclass
 class Column:
     """One column that the plan uses, and the blocks of it read so far (NaN: missing).
 
     `codes` is None for a number; else it gives the index of each text, and `grows` lets new texts in. `limits`: what a
-    number may not leave; `least`: what it may not be below; `one_of`: all that it may be. `refusal`: what to do about a
-    cell that is not read. `missing`: what to do about an empty field, where there may be none.
+    number may not leave; `span`: what the device's counts can stand for; `least`: what a number may not be below;
+    `one_of`: all that it may be. `refusal`: what to do about a cell that is not read. `missing`: what to do about an
+    empty field, where there may be none.
 
     `either`: numbers or texts, which all rows together decide. Both are then kept: the number of each cell, NaN where
     there is none, in `blocks`, its text's code in `text_blocks`; `first_text` is the first cell that is no number.
@@ -51,6 +61,7 @@ class Column:
     codes: dict[str, int] | None = None
     grows: bool = False
     limits: tuple[Fraction, Fraction] | None = None
+    span: Span | None = None
     least: float | None = None
     one_of: tuple[float, ...] | None = None
     missing: str | None = None
@@ -147,6 +158,7 @@ def _numbers(lines: Sequence[int], cells: Cells, column: Column, findings: Findi
             todo = column.missing or "leave the field empty where a value is missing"
             findings.add(lines[at], column, *not_a_number(cell, column.refusal, todo))
             values[at] = np.nan
+    inside = np.ones(len(values), dtype=bool)
     if column.limits:
         low, high = column.limits
         # A row is in range when its binary64 lies within the limits rounded to binary64.
@@ -154,6 +166,12 @@ def _numbers(lines: Sequence[int], cells: Cells, column: Column, findings: Findi
         for at in np.flatnonzero(~(inside | np.isnan(values))).tolist():
             found = f"found {shown_number(values[at])}, outside the range {decimal_text(low)} to {decimal_text(high)}"
             findings.add(lines[at], column, found, 'correct it, widen the range, or write outside = "clamp"')
+    if column.span:
+        span = column.span
+        for at in np.flatnonzero(((values < span.least) | (span.most < values)) & inside).tolist():
+            beyond = f"which no count gives: all counts span {decimal_text(span.low)} to {decimal_text(span.high)}"
+            todo = "correct it, or correct bits, gain and offset"
+            findings.add(lines[at], column, f"found {shown_number(values[at])}, {beyond}", todo)
     wrong = np.zeros(len(values), dtype=bool)
     if column.least is not None:
         wrong = values < column.least

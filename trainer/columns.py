@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import difflib
+import math
 from collections import Counter
 from dataclasses import dataclass, replace
+from fractions import Fraction
 
 import numpy as np
 
 from runtime_min.errors import Problem, RowsError
 from runtime_min.names import c_input_name, name_and_unit, name_problem
-from trainer.cells import MOST_LEVELS, Column, Floats, not_a_number
+from trainer.cells import MOST_LEVELS, Column, Floats, Span, not_a_number
 from trainer.plan import InputPlan, Plan
 from trainer.plan_checks import shown
 from trainer.plan_rows import named_columns
@@ -38,11 +40,7 @@ class Columns:
 
 def columns_of_plan(plan: Plan, header: list[str], place: str) -> Columns:
     """Raises RowsError with every column that is missing, there twice, or cannot be an input."""
-    problems = [
-        Problem(place, f"found {count} columns named {shown(name)}", "rename all but one")
-        for name, count in Counter(header).items()
-        if count > 1 and name
-    ]
+    problems = repeated(header, place)
     named = named_columns(plan.rows)
     positions = {key: _position(column, header, place, _MEANING[key], problems) for key, column in named}
     inputs = plan.inputs or _inputs_of(header, [column for _, column in named], place, problems)
@@ -70,6 +68,15 @@ def columns_of_plan(plan: Plan, header: list[str], place: str) -> Columns:
         held_out = Column(plan.rows.held_out, positions["held_out"], todo, one_of=(0.0, 1.0), missing=todo)
     measured = tuple(_measured(plan, entry, at) for entry, at in zip(inputs, places, strict=True))
     return Columns(inputs, measured, label, weight, group, held_out)
+
+
+def repeated(header: list[str], place: str) -> list[Problem]:
+    """A problem for each name that several columns have."""
+    return [
+        Problem(place, f"found {count} columns named {shown(name)}", "rename all but one")
+        for name, count in Counter(header).items()
+        if count > 1 and name
+    ]
 
 
 def settled(columns: Columns, where: str) -> tuple[tuple[InputPlan, ...], list[Floats]]:
@@ -120,8 +127,32 @@ def _measured(plan: Plan, entry: InputPlan, position: int) -> Column:
         if entry.outside == "fault" and entry.low is not None and entry.high is not None:
             limits = (entry.low, entry.high)
         todo = "correct it, or leave the field empty where a value is missing"
-        return Column(entry.column, position, todo, limits=limits)
+        return Column(entry.column, position, todo, limits=limits, span=_span(entry))
     return Column(entry.column, position, f"correct it, or {_NAME_ALL}, text with levels", either=True)
+
+
+def _span(entry: InputPlan) -> Span | None:
+    """What rows may hold of an input in counts: what counts can stand for, and one count more at each end.
+
+    A converter of 12 bits whose full scale is 4096 counts reaches that scale less one count, and a row may say the
+    full scale. Beyond that, a limit that clamps may stand between the rows and the counts' end.
+    """
+    if entry.counts is None:
+        return None
+    low, high = entry.counts.span
+    least, most = low - abs(entry.counts.gain), high + abs(entry.counts.gain)
+    clamped = entry.outside == "clamp" and entry.low is not None and entry.high is not None
+    clamped = entry.outside == "clamp"
+    below = clamped and entry.low is not None and entry.low >= least
+    above = clamped and entry.high is not None and entry.high <= most
+    return Span(low, high, -math.inf if below else _nearest(least), math.inf if above else _nearest(most))
+
+
+def _nearest(value: Fraction) -> float:
+    try:
+        return float(value)
+    except OverflowError:
+        return math.inf if value > 0 else -math.inf
 
 
 def _position(name: str, header: list[str], place: str, what: str, problems: list[Problem]) -> int:

@@ -16,6 +16,18 @@ class CountsPlan:
     offset: Fraction
     signed: bool
 
+    @property
+    def whole(self) -> tuple[int, int]:
+        """The least and the largest count."""
+        half = 2 ** (self.bits - 1)
+        return (-half, half - 1) if self.signed else (0, 2 * half - 1)
+
+    @property
+    def span(self) -> tuple[Fraction, Fraction]:
+        """The least and the largest value that a count can stand for."""
+        low, high = sorted(self.offset + self.gain * count for count in self.whole)
+        return low, high
+
 
 @dataclass(frozen=True)
 class InputPlan:

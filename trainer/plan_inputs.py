@@ -149,12 +149,12 @@ def device_range_problem(
     """(found, what to do) where a range holds fewer than two of the numbers that the device can deliver; else None."""
     if counts is None or not low < high:
         return range_problem(low, high, arithmetic, origin or Fraction(0))
-    least, most = (-(2 ** (counts.bits - 1)), 2 ** (counts.bits - 1) - 1) if counts.signed else (0, 2**counts.bits - 1)
+    least, most = counts.whole
     ends = sorted((limit - counts.offset) / counts.gain for limit in (low, high))
     first, last = max(math.ceil(ends[0]), least), min(math.floor(ends[1]), most)
     if first < last:
         return None
-    spans = " to ".join(decimal_text(value) for value in sorted(counts.offset + counts.gain * n for n in (least, most)))
+    spans = " to ".join(decimal_text(value) for value in counts.span)
     holds = "one count" if first == last else "no count"
     found = f"found {decimal_text(low)} to {decimal_text(high)}, which holds {holds}: all counts span {spans}"
     return found, "widen the range, or correct bits, gain and offset"
