@@ -49,6 +49,9 @@ _CPP_KEYWORDS = """
 # What the Python artefact imports: an artefact of that name would import itself.
 _IMPORTED = ("math", "struct")
 
+# Headers of a release that are called the same whatever the model.
+_FILES = ("vectors",)
+
 _LANGUAGES = (
     ("Python", frozenset(_PYTHON_KEYWORDS.split())),
     ("C", frozenset(_C_KEYWORDS.split())),
@@ -84,6 +87,13 @@ def name_problem(name: str) -> str | None:
     if name in _IMPORTED:
         return f'found "{name}", a module that the Python artefact imports'
     return None
+
+
+def model_name_problem(name: str) -> str | None:
+    """What is wrong with `name` as the name of a model, as `name_problem` says it: it also names files."""
+    if name in _FILES:
+        return f'found "{name}", whose header would take the place of {name}.h'
+    return name_problem(name)
 
 
 def unit_suffix(unit: str) -> str:

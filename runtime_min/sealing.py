@@ -33,7 +33,7 @@ from runtime_min.model import (
     SealedModel,
     TrainedModel,
 )
-from runtime_min.names import exact_decimal, name_problem
+from runtime_min.names import exact_decimal, model_name_problem
 from runtime_min.sealing_floats import seal_floats
 from runtime_min.sealing_integers import seal_integers
 from runtime_min.validity import sealed_problems
@@ -162,8 +162,8 @@ def seal(
     exact_tolerance = None if tolerance is None else _exact(tolerance)
     if tolerance is not None and (exact_tolerance is None or not exact_tolerance > 0):
         problems.append(Problem("tolerance", f"found {tolerance}", "give a finite number above 0, or None"))
-    if name_problem(name):
-        problems.append(Problem("name", str(name_problem(name)), "choose another name"))
+    if problem := model_name_problem(name):
+        problems.append(Problem("name", problem, "choose another name"))
     if problems:
         raise SealError(problems)
     inputs = tuple(

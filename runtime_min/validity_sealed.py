@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from runtime_min.arithmetic import ACCUMULATOR_BITS, ROUND
 from runtime_min.device_numbers import device_numbers
 from runtime_min.model import ARITHMETICS, INTEGERS, Counts, Input, SealedModel
-from runtime_min.names import c_position_name, name_problem
+from runtime_min.names import c_position_name, model_name_problem, name_problem
 from runtime_min.proof import proof
 from runtime_min.validity_request import delivery_problems, request_problems
 from runtime_min.validity_rules import AGAIN, Found, class_problems, digest_problems, distinct
@@ -33,7 +33,7 @@ def count_limits(counts: Counts) -> tuple[int, int]:
 
 
 def _sealed(sealed: SealedModel) -> Iterator[Found]:
-    problem = name_problem(sealed.name)
+    problem = model_name_problem(sealed.name)
     if problem:
         yield "model.name", problem, AGAIN
     yield from class_problems("model", sealed.classes, len(sealed.intercepts))

@@ -105,7 +105,7 @@ def test_columns_that_cannot_be_inputs_are_left_out_with_the_reason(tmp_path: Pa
     assert {guess.column: guess.why for guess in made.guesses if guess.taken_for == "left out"} == {
         "row": "it counts the rows",
         "fixed": "it has one value",
-        "note": "its texts are too many for levels, or stand beside numbers",
+        "note": "its texts are too many for levels",
         "empty": "it is empty",
     }
 

@@ -112,6 +112,11 @@ INPUT_KEYS = "the keys here are name, column, unit, range, outside, missing, lev
         ('"pump"', '"Pump"', f'model: found "Pump", which is not an identifier of lower-case letters; {NAME_RULE}'),
         ('"pump"', '"new"', f'model: found "new", a keyword of C++; {NAME_RULE}'),
         ('"pump"', '"math"', f'model: found "math", a module that the Python artefact imports; {NAME_RULE}'),
+        (
+            '"pump"',
+            '"vectors"',
+            f'model: found "vectors", whose header would take the place of vectors.h; {NAME_RULE}',
+        ),
         ('"pump"', '"a__b"', f'model: found "a__b", whose double underscore is reserved in C++; {NAME_RULE}'),
         ('"pump"', "3", 'model: found 3, not a text; name the model, for example model = "pump"'),
         ('model = "pump"', "", 'model: found nothing; name the model, for example model = "pump"'),

@@ -14,13 +14,15 @@ from decimal import ROUND_CEILING, ROUND_FLOOR, Context, Decimal
 from pathlib import Path
 
 from runtime_min.errors import Problem, RowsError
-from runtime_min.names import c_input_name, name_and_unit, name_problem
+from runtime_min.names import c_input_name, model_name_problem, name_and_unit, name_problem
+from trainer.plan_checks import listed, shown
 from trainer.profile import Profile, few_texts, profiles
 
 # Common practice, no source: words in headers and classes.
 LABEL_WORDS = ("label", "state", "status", "class", "outcome", "target", "result", "condition", "defect", "fault", "y")
 GROUP_WORDS = ("id", "serial", "batch", "lot", "unit", "device", "machine", "run", "group", "subject", "site", "no")
 EVENT_WORDS = ("1", "true", "yes", "y", "fault", "faulty", "fail", "failed", "bad", "nok", "defect", "alarm")
+YES_WORDS = ("1", "true", "yes", "y")
 UNIT_WORDS = {
     "kpa": "kPa", "pa": "Pa", "mpa": "MPa", "bar": "bar", "mbar": "mbar", "psi": "psi", "c": "°C", "degc": "°C",
     "k": "K", "f": "°F", "a": "A", "ma": "mA", "v": "V", "mv": "mV", "kv": "kV", "w": "W", "kw": "kW", "hz": "Hz",
@@ -30,8 +32,13 @@ UNIT_WORDS = {
     "ohm": "ohm", "lux": "lux", "m3": "m3", "deg": "°",
 }  # fmt: skip
 PER_WORDS = ("s", "ms", "min", "h", "m", "m2", "m3", "k", "v", "a")
+GOOD_WORDS = ("ok", "good", "pass", "passed", "healthy", "normal", "valid")
+"""In a label's header: what reads like an event among its classes then says that there is none."""
+COUNT_WORDS = ("count", "counts", "freq", "frequency", "n")
 GROUP_ROWS = 5
 """Fewest rows, on average, of each text in a column that may group the rows."""
+NEAR_TEXTS = 8
+"""Most texts of a column that is named where no column has two."""
 SPLIT_ROWS = 12
 """Fewest rows of the rarer class for which a quarter of all rows is held out."""
 
@@ -93,15 +100,26 @@ def draft(path: Path, folder: Path | None = None) -> Draft:
 def _label(path: Path, columns: Sequence[Profile]) -> tuple[Profile, list[Profile]]:
     """The most likely label and the other candidates: a column with two values, by its header, then the last."""
     two = [c for c in columns if c.counts is not None and len(c.counts) == 2 and not c.missing]
-    if not two:
-        raise RowsError(Problem(str(path), "found no column with exactly two values", "add the column with the class"))
 
     def rank(column: Profile) -> tuple[bool, bool, int]:
-        words = re.findall(r"[a-z]+", column.header.lower())
+        words = _words(column)
         return any(word in LABEL_WORDS for word in words), not column.numeric, columns.index(column)
 
+    if not two:
+        found, todo = "found no column with exactly two values", "add the column with the class"
+        near = [c for c in columns if 2 <= len(c.counts or ()) <= min(NEAR_TEXTS, c.rows // 2)]
+        if near:
+            best = max(near, key=rank)
+            empty = f", and is empty in {best.missing:,} rows" if best.missing else ""
+            found += f"; {shown(best.header)} has {listed(sorted(best.counts or ()))}{empty}"
+            todo = "write one of two classes in each row, or add the column with the class"
+        raise RowsError(Problem(str(path), found, todo))
     best = max(two, key=rank)
     return best, [column for column in two if column is not best]
+
+
+def _words(column: Profile) -> list[str]:
+    return re.findall(r"[a-z]+", column.header.lower())
 
 
 def _label_reason(label: Profile, others: Sequence[Profile]) -> str:
@@ -113,8 +131,13 @@ def _classes(label: Profile) -> tuple[tuple[str, str], str]:
     """The two classes, the event last, and why."""
     counts = label.counts or {}
     first, second = sorted(counts)
+    good = [word for word in _words(label) if word in GOOD_WORDS]
     for event, other in ((second, first), (first, second)):
         if event.lower() in EVENT_WORDS and other.lower() not in EVENT_WORDS:
+            if event == "1" and other not in ("0", "-1"):
+                continue  # a code: 1 and 2 say nothing
+            if good and event.lower() in YES_WORDS:
+                return (event, other), f'"{event}" stands for "{good[0]}" in the header'
             return (other, event), "it reads like one"
     rare, common = sorted(counts, key=lambda text: (counts[text], text))
     return (common, rare), f"it is the rarer class ({counts[rare]:,} of {label.rows:,} rows)"
@@ -125,7 +148,7 @@ def _group(columns: Sequence[Profile]) -> Profile | None:
     for column in columns:
         if column.counts is None or column.missing or len(column.counts) < 3:
             continue
-        words = re.findall(r"[a-z]+", column.header.lower())
+        words = _words(column)
         many = column.rows >= GROUP_ROWS * len(column.counts)
         named = any(word in GROUP_WORDS for word in words) and (not column.numeric or column.whole)
         if many and (named or (not column.numeric and len(column.counts) > 8)):
@@ -144,7 +167,9 @@ def _unfit(column: Profile) -> str | None:
     if column.numeric and column.whole and column.runs and column.rows > 2:
         return "it counts the rows"
     if not column.numeric and not few_texts(column):
-        return "its texts are too many for levels, or stand beside numbers"
+        if column.mixed is not None:
+            return f"it has {shown(column.mixed)} beside numbers; leave the field empty where there is no value"
+        return "its texts are too many for levels"
     if column.numeric and max(abs(column.low or 0.0), abs(column.high or 0.0)) > 1e300:
         return "its numbers are too large"
     return None
@@ -164,6 +189,8 @@ def _name(column: Profile, taken: set[str]) -> tuple[str, str, str]:
                 name, unit = "_".join(words[:-length]), found
                 why = f"the header ends in {'_'.join(words[-length:])}"
                 break
+    if column.whole and not unit and any(word in COUNT_WORDS for word in _words(column)):
+        why += f"; if it counts equal rows, write weight = {shown(column.header)} in [rows] and remove this input"
     if name_problem(name):
         name = f"input_{name}".rstrip("_")
     if name_problem(name):
@@ -184,7 +211,7 @@ def _unit_of(words: Sequence[str]) -> str | None:
 
 def _head(path: Path) -> str:
     name = name_and_unit(path.stem)[0]
-    model = name if not name_problem(name) else "model"
+    model = name if not model_name_problem(name) else "model"
     first = f"# A draft from {_comment(path.name)}. Each guess stands beside its reason: look at all of them."
     return f"{first}\n\nmodel   = {_text(model)}\npurpose = {_text('')}"
 

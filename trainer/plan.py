@@ -13,7 +13,7 @@ from fractions import Fraction
 from pathlib import Path
 
 from runtime_min.errors import PlanError, Problem
-from runtime_min.names import NAME_RULE, name_problem
+from runtime_min.names import NAME_RULE, model_name_problem
 from trainer.plan_checks import Section, decimal_text, shown
 from trainer.plan_classes import (
     CountsPlan,
@@ -62,7 +62,7 @@ def read_plan(path: Path) -> Plan:
         {"term": ("functions of inputs are", "add them to the rows as columns and name these as inputs")},
     )
     model = top.text("model", None, 'name the model, for example model = "pump"')
-    if model and (problem := name_problem(model)):
+    if model and (problem := model_name_problem(model)):
         top.report("model", problem, NAME_RULE)
     rows = read_rows_table(top.section("rows"), path.parent)
     device = _device(top.section("device"))

@@ -22,6 +22,9 @@ MOST_COLUMNS = 4096
 _BLOCK_RECORDS = 4096
 _BLOCK_BYTES = 2_000_000
 
+# What spreadsheets put between the fields where the comma is taken by the numbers.
+_NO_COMMAS = ((";", "semicolons"), ("\t", "tabs"))
+
 # What the csv module says of a broken record -> our sentence.
 _BROKEN = (
     ("unexpected end of data", "found a quote that is never closed", "close it, or double it inside a quoted field"),
@@ -43,6 +46,9 @@ class CsvFile:
         _, self.header = next(self._records, (1, []))
         if not self.header:
             raise RowsError(Problem(self.where, "found no header", "give a .csv with a header and rows"))
+        if len(self.header) == 1 and (marks := [name for mark, name in _NO_COMMAS if mark in self.header[0]]):
+            todo = "save the file with commas between the fields and points in the numbers"
+            raise RowsError(Problem(f"{self.where}: line 1", f"found {marks[0]} between the fields", todo))
 
     def blocks(self, findings: Findings) -> Iterator[Block]:
         """The rows that have as many fields as the header; the others become problems."""
