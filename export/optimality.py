@@ -1,7 +1,8 @@
 """The fit held against its own optimality condition, recomputed from the raw rows.
 
 Independent on purpose of everything in `trainer`: another reader of the files and another split (`raw_rows`),
-long-double sums, and the gradient on columns standardised here. At the optimum of
+long-double sums, and the gradient on columns standardised here by centres and scales that were found to be right. At
+the optimum of
 
     sum_l ω_l log p(y_l | x_l, w) - 1/2 sum_j ((w_j - m_j) / s_j)^2
 
@@ -29,12 +30,14 @@ __all__ = ["AskedPrior", "AskedTerm", "Optimality", "Source", "recheck_fit"]
 # What the stored weights may be from the optimum: their grid of 2^-30, and 1e-6 posterior sd for this computation.
 GRID = 2.0**-30
 POSTERIOR_SD_SHARE = 1e-6
-# Centres and scales are stored to 40 significant bits of the scale.
+# Centres and scales are stored to 40 significant bits of the scale, centres at least to their own last bit.
 STANDARDISATION_SHARE = 2.0**-39
 # Of the curve of log losses, what is lower by less is as low.
 LOSS_STEP = 1e-11
 # Of a covariance, relative to the two posterior sds: what two inversions may differ by.
 COVARIANCE_SHARE = 1e-6
+# Of the entries of a Hessian, relative: sums of many rows in double, here and in the fit.
+ROUNDED_ENTRIES = 1e-14
 
 LongDoubles = npt.NDArray[np.longdouble]
 
@@ -73,9 +76,7 @@ class Optimality:
     rows: int
 
 
-def recheck_fit(
-    trained: TrainedModel, request: Request, source: Source, asked: AskedPrior | None = None
-) -> Optimality:
+def recheck_fit(trained: TrainedModel, request: Request, source: Source, asked: AskedPrior | None = None) -> Optimality:
     """Recompute from the files: split, centres, scales, class sums, Newton step at the stored weights, results.
 
     asked: what the plan says of the prior and the field, held against what the trained model has; None to leave it.
@@ -96,10 +97,13 @@ def recheck_fit(
             continue
         centre, scale = _moments(column, weights)
         slack = STANDARDISATION_SHARE * scale
-        if not (abs(centre - term.centre) <= slack and abs(scale - term.scale) <= slack):
+        if abs(centre - term.centre) <= max(slack, np.spacing(abs(term.centre))) and abs(scale - term.scale) <= slack:
+            # What the weights are the optimum of: a centre far from 0 is rounded by more than the weights' grid.
+            centre, scale = np.longdouble(term.centre), np.longdouble(term.scale)
+        else:
             problems.append(
-                f'"{term.name}" has mean {float(centre):.10g} and population sd {float(scale):.10g} over the fitted '
-                f"rows, the trained model says {term.centre:.10g} and {term.scale:.10g}"
+                f'"{term.name}" has mean {float(centre):.17g} and population sd {float(scale):.10g} over the fitted '
+                f"rows, the trained model says {term.centre:.17g} and {term.scale:.10g}"
             )
         columns[:, j] = (column - centre) / scale
     step, off = _newton_step(trained, columns, labels, weights)
@@ -175,18 +179,32 @@ def _newton_step(
     gradient = design.T @ residual - precision * (weights - means)
     curvature = row_weights * tail / (1 + tail) ** 2
     hessian = (design.T @ (design * curvature[:, None])).astype(float) + np.diag(precision)
-    step = np.linalg.solve(hessian, gradient.astype(float))
-    spread = np.sqrt(np.diag(np.linalg.inv(hessian)))
+    covariance, doubt = _inverse(hessian)
+    step = covariance @ gradient.astype(float)
+    spread = np.sqrt(np.diag(covariance))
     names = ["the intercept", *(f'the weight of "{term.name}"' for term in trained.terms)]
     problems = [
         f"{names[j]} is {abs(step[j]):.2g} from the optimum of these rows ({abs(step[j]) / spread[j]:.2g} posterior sd)"
         for j in range(len(step))
         if not abs(step[j]) <= GRID + POSTERIOR_SD_SHARE * spread[j]
     ]
-    stated = np.array(trained.covariance) / np.outer(spread, spread)
-    if not np.max(np.abs(stated - np.linalg.inv(hessian) / np.outer(spread, spread))) <= COVARIANCE_SHARE:
+    off = np.abs(np.array(trained.covariance) - covariance) / np.outer(spread, spread)
+    moved = math.expm1(GRID * float(np.max(np.abs(design).sum(axis=1))))  # from the optimum to weights on the grid
+    if not np.max(off) <= COVARIANCE_SHARE + doubt + moved:
         problems.append("the covariance of the weights is not that of their posterior on these rows")
     return float(np.max(np.abs(step) / spread)), problems
+
+
+def _inverse(hessian: npt.NDArray[np.float64]) -> tuple[npt.NDArray[np.float64], float]:
+    """The inverse, its rows and columns scaled to a unit diagonal on the way; and what rounding does to it, relatively.
+
+    Entries with errors of some 1e-16 give an inverse with errors of that times the condition number (Higham 2002,
+    Accuracy and Stability of Numerical Algorithms, section 7.2): much where one row weighs 1e12 times the others.
+    """
+    scaling = 1.0 / np.sqrt(np.diag(hessian))
+    scaled = hessian * np.outer(scaling, scaling)
+    inverse: npt.NDArray[np.float64] = np.linalg.inv(scaled) * np.outer(scaling, scaling)
+    return inverse, float(np.linalg.cond(scaled)) * ROUNDED_ENTRIES
 
 
 def _with_typical(
