@@ -135,6 +135,8 @@ def seal(
 
     Raises SealError with every problem, among them a name that ranges lacks or has too many.
     """
+    if not isinstance(ranges, Mapping):
+        raise SealError(Problem("ranges", f"found a {type(ranges).__name__}", 'give {"name": (low, high)}'))
     problems = [
         Problem(f'ranges["{entry.name}"]', "is missing", "give (low, high)")
         for entry in trained.inputs

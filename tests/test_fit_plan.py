@@ -160,4 +160,4 @@ def test_level_that_no_fitted_row_has_is_named(tmp_path: Path) -> None:
     values[values[:, 1] == 2, 1] = 0
     with pytest.raises(FitError) as caught:
         fit_plan(plan, replace(rows, values=values))
-    assert '"impeller=open"' in str(caught.value)
+    assert 'no fitted row has the level "open" of impeller; remove it from the levels of impeller' in str(caught.value)

@@ -94,6 +94,15 @@ def test_constant_column_is_refused_under_any_prior(sd: float) -> None:
     assert said(values, labels, prior(3, sd), np.where(np.arange(400) == 5, 0.0, 1.0)) == expected
 
 
+def test_level_that_no_row_has_is_named_as_a_level() -> None:
+    values, labels = rows()
+    values[:, 1] = 0.0
+    problems = judge(values, labels, None, prior(3), ("flow", "wheel=open", "head"), CLASSES)
+    assert [str(problem) for problem in problems] == [
+        'rows: no fitted row has the level "open" of wheel; remove it from the levels of wheel, or hold out fewer rows'
+    ]
+
+
 def test_narrow_prior_is_refused() -> None:
     values, labels = rows()
     found = said(values, labels, Prior((0.0, math.nan, 0.0), (1e-5, 1.0, math.nan), 0.0))

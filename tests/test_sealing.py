@@ -342,6 +342,10 @@ def test_seal_refuses_a_range_that_is_none(limits: Any) -> None:
     ]
 
 
+def test_seal_refuses_ranges_without_names() -> None:
+    assert sentences(ranges=[(0, 180)]) == ['ranges: found a list; give {"name": (low, high)}']
+
+
 def test_seal_takes_limits_of_any_kind_of_number() -> None:
     trained = make_trained(PUMP, 5)
     plain = seal(trained, ranges={"flow": (0.5, 180.0)}, tolerance=0.25)

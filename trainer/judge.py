@@ -133,13 +133,17 @@ def _missing_classes(labels: Labels, class_names: Sequence[str]) -> list[Problem
 
 def _constant_columns(values: Array, names: Sequence[str]) -> list[Problem]:
     return [
-        Problem(
-            f'rows: column "{names[column]}"',
-            f"the same value, {values[0, column]:g}, in every row",
-            "remove the column",
-        )
+        _constant(names[column], float(values[0, column]))
         for column in np.flatnonzero((values == values[0]).all(axis=0)).tolist()
     ]
+
+
+def _constant(name: str, value: float) -> Problem:
+    entry, of_level, level = name.partition("=")
+    if of_level and value == 0:
+        todo = f"remove it from the levels of {entry}, or hold out fewer rows"
+        return Problem("rows", f'no fitted row has the level "{level}" of {entry}', todo)
+    return Problem(f'rows: column "{name}"', f"the same value, {value:g}, in every row", "remove the column")
 
 
 def _dependent_columns(columns: Array, prior: Prior, names: Sequence[str]) -> list[Problem]:
