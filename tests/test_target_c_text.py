@@ -17,7 +17,7 @@ from c_programs import FAMILIES, C, compiled, compiler, header, need, run_header
 from hypothesis import given
 from hypothesis import strategies as st
 from line_models import HOSTILE, line_model, named_model, with_text
-from models import FLOW, SUCTION, make_request, make_trained, sample_sealed_models
+from models import FLOW, SUCTION, make_request, make_trained, sample_extended_models, sample_sealed_models
 
 from export.targets import Vector
 from export.targets.c import lexical
@@ -190,6 +190,15 @@ def test_positions_carry_input_and_unit() -> None:
     assert re.search(r"PUMP_CAVITATION_IN_FLOW_M3_PER_H, /\* m\^3/h, 0.0 to 180.0; outside: clamped; NaN: fault", text)
     assert "not a safety function" in text
     assert not re.search("copyright|permission|warranty|MIT", text)
+
+
+def test_positions_say_what_the_device_delivers() -> None:
+    origins, counts = (sample_extended_models()[name][1] for name in ("origins_binary32", "counts_binary32"))
+    text = header(origins)
+    assert "_IN_PRESSURE_PA_ABOVE_101325, /* Pa above 101325, -6325.0 to 6675.0; outside: fault; NaN: fault */" in text
+    assert re.search(r"_IN_COLD_DEG_C_ABOVE_MINUS_40_25, +/\* deg C above -40.25, -19.75 to 20.25;", text)
+    text = header(counts)
+    assert re.search(r"_IN_ADC_COUNTS, +/\* counts of 0.1 kPa from -95, 0.0 to 3450.0; outside: fault", text)
 
 
 # --- guards ----------------------------------------------------------------------------------------------------------

@@ -10,6 +10,7 @@ from export.targets.c.emit_integers import PARTS, integer_context, row_words
 from export.targets.c.template import fill
 from export.vectors import next_to
 from runtime_min.model import INTEGERS, SealedModel, Term
+from runtime_min.names import delivered_unit
 
 SMALLEST_NORMAL = {"binary32": 2.0**-126, "binary64": 2.0**-1022}
 SMALLEST = {"binary32": 2.0**-149, "binary64": 2.0**-1074}
@@ -60,6 +61,7 @@ def _words_of(sealed: SealedModel) -> dict[str, object]:
     names = lexical.input_names(sealed)
     return {
         "table": lambda cells, labels=names: lexical.table(cells, labels),
+        "delivered": delivered_unit,
         "levels_in_words": lambda entry: ", ".join(f"{rank} {level}" for rank, level in enumerate(entry.levels)),
     }
 

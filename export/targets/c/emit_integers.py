@@ -15,7 +15,6 @@ from export.targets.c.scalings import scalings
 from runtime_min.arithmetic import ACCUMULATOR_BITS, from_bits
 from runtime_min.integer_score import count_bits, missing_count
 from runtime_min.model import SealedModel
-from runtime_min.names import delivered_unit
 from runtime_min.proof import Step, proof
 
 PARTS = ("integer_interface.h.jinja", "integer_scoring.h.jinja", "integer_self_test.h.jinja")
@@ -82,7 +81,6 @@ def integer_context(sealed: SealedModel, self_test: SelfTest) -> dict[str, objec
         "missing": lexical.integer(missing_count(sealed), count_bits(sealed)),
         "no_log_odds": lexical.integer(-(1 << (accumulator - 1)), accumulator),
         "real_threshold": lambda units: f"{float(Fraction(units) / 2 ** (sealed.accumulator_shift or 0)):.6g}",
-        "delivered": delivered_unit,
         "can_halve": can_halve(sealed),
         "scalings": scalings(sealed),
         "most": (1 << (count_bits(sealed) - 1)) - 1,
