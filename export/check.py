@@ -55,7 +55,8 @@ class Check:
 class Report:
     """All checks of one release. `accepted`: targets and parts that may stand without having run.
 
-    `measures`: what each function costs on the emulated parts that ran.
+    `measures`: what each function costs on the emulated parts that ran. `decides`: sentences on decisions that the
+    ranges never allow, none as a rule.
     """
 
     model_id: str
@@ -66,6 +67,7 @@ class Report:
     tolerance: Fraction | None
     accepted: tuple[str, ...]
     measures: tuple[Measure, ...] = ()
+    decides: tuple[str, ...] = ()
 
     @property
     def ok(self) -> bool:
@@ -85,6 +87,18 @@ def hold_tolerance(trained: TrainedModel, sealed: SealedModel) -> Budget:
     if tolerance is not None and not budget.log_odds <= Fraction(tolerance):
         raise BudgetError(advise(trained, sealed, budget, Fraction(tolerance)))
     return budget
+
+
+def never_decided(sealed: SealedModel, budget: Budget) -> tuple[str, ...]:
+    """What the model answers nowhere in the ranges: a threshold out of reach is most often a mistake of units."""
+    unit = 1.0 if sealed.accumulator_shift is None else 2.0**-sealed.accumulator_shift
+    low, high = sealed.decision.low * unit, sealed.decision.high * unit
+    least, most = budget.reach
+    never = [f'"{name}"' for name, out in ((sealed.classes[1], most < high), (sealed.classes[0], least >= low)) if out]
+    if not never:
+        return ()
+    span = f"the log-odds reach {least:.3g} to {most:.3g} in the ranges, the thresholds are {low:.3g} and {high:.3g}"
+    return (f"never {' nor '.join(never)}: {span}; look at the costs, the no-call and the ranges",)
 
 
 def check_release(
@@ -148,6 +162,7 @@ def check_release(
         report,
         checks=tuple(checks),
         measures=tuple(measures),
+        decides=() if budget is None else never_decided(sealed, budget),
         budget=budget,
         attack=found,
         tolerance=None if tolerance is None else Fraction(tolerance),

@@ -222,7 +222,7 @@ def _told(into: Path) -> Iterator[None]:
 
 def _fit(request: argparse.Namespace) -> int:
     from export.folder import write_files
-    from export.report import fit_lines, model_lines
+    from export.report import fit_lines, model_lines, weight_lines
     from runtime_min.codec import sealed_text, trained_text
 
     with _progress() as progress:
@@ -233,7 +233,8 @@ def _fit(request: argparse.Namespace) -> int:
         f"{plan.model}.sealed.json": sealed_text(sealed).encode(),
     }
     write_files(into, written)
-    _print([*model_lines(sealed), *fit_lines(trained), *(f"{'written':<12}{into / name}" for name in written)])
+    _print([*model_lines(sealed), *fit_lines(trained), *weight_lines(trained)])
+    _print([f"{'written':<10}{into / name}" for name in written])
     return 0
 
 

@@ -55,6 +55,18 @@ def fit_lines(trained: TrainedModel) -> list[str]:
     return [*lines, *(f"{'':<{_INDENT}}{what:<18}{model:<10}{base}" for what, model, base in table)]
 
 
+def weight_lines(trained: TrainedModel) -> list[str]:
+    """Each weight on standardised columns with its posterior sd, and per unit of its input."""
+    spread = [math.sqrt(max(row[at], 0.0)) for at, row in enumerate(trained.covariance)]
+    folded = trained.folded()
+    rows = [("intercept", trained.intercept, spread[0], folded.intercept)]
+    each = zip(trained.terms, trained.weights, spread[1:], folded.weights, strict=True)
+    rows += [(_shown(term.name), weight, sd, per_unit) for term, weight, sd, per_unit in each]
+    width = max(len(name) for name, *_ in rows)
+    head = f"{'weights':<{_INDENT}}{'':<{width}}{'per spread':>12}{'posterior sd':>14}{'per unit':>14}"
+    return [head, *(f"{'':<{_INDENT}}{name:<{width}}{w:>12.4f}{sd:>14.4f}{unit:>14.6g}" for name, w, sd, unit in rows)]
+
+
 def _choice_lines(choice: Choice | None) -> list[str]:
     """The prior's sd where the rows chose it; a choice at an end of the grid wants a look."""
     if choice is None:
@@ -96,6 +108,7 @@ def check_lines(report: Report) -> list[str]:
         worst, share = float(report.attack.worst), report.attack.share
         where = " in all inputs there are" if report.attack.everything else ""
         lines.append(_line("", f"worst error found{where} {worst:.3g}, {share:.0%} of that bound"))
+    lines += [_line("decision", sentence) for sentence in report.decides]
     lines += ["", *(_check_line(entry, report.accepted) for entry in report.checks), ""]
     lines += _cost_lines(report)
     failed = [entry for entry in report.checks if entry.ran and not entry.ok]
@@ -157,6 +170,7 @@ def report_json(report: Report) -> str:
                 for entry in report.checks
             ],
             "budget": _budget(report),
+            "decides": list(report.decides),
             "parts": [asdict(entry) for entry in report.measures],
         },
         indent=1,

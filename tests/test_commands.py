@@ -165,3 +165,29 @@ def test_path_with_spaces_and_quotes_ships(tmp_path: Path) -> None:
     shutil.copytree(EXAMPLE, folder, ignore=shutil.ignore_patterns("release"))
     assert run("ship", folder / "plan.toml").returncode == 0
     assert (folder / "release" / "manifest.json").exists()
+
+
+def test_budget_above_the_plans_tolerance_exits_1_says_what_costs_most_and_what_would_fit(tmp_path: Path) -> None:
+    plan = small_plan(tmp_path, "[prior]\nsd = 1.0\n[device]\ntolerance = 1e-9\n")
+    result = run("ship", plan)
+    assert result.returncode == 1
+    (line,) = result.stderr.splitlines()
+    assert "more than the tolerance 1e-09, and the costliest item is " in line
+    assert 'choose arithmetic = "binary64"' in line
+    assert not (tmp_path / "release").exists()
+
+
+def test_threshold_that_the_ranges_never_reach_is_said(tmp_path: Path) -> None:
+    plan = small_plan(tmp_path, "[prior]\nsd = 1.0\n[decision]\ncost_miss = 1e30\n")
+    shown = " ".join(run("ship", plan, "--unchecked", "c").stdout.split())
+    assert 'decision never "a": the log-odds reach' in shown
+
+
+def test_fit_prints_each_weight_with_its_posterior_sd(tmp_path: Path) -> None:
+    from runtime_min.codec import load_trained
+
+    result = run("fit", small_plan(tmp_path))
+    trained = load_trained(tmp_path / "small.trained.json")
+    for at, (name, weight) in enumerate([("intercept", trained.intercept), ("x", trained.weights[0])]):
+        numbers = [name, f"{weight:.4f}", f"{trained.covariance[at][at] ** 0.5:.4f}"]
+        assert numbers in [line.split()[:3] for line in result.stdout.splitlines()]
