@@ -35,9 +35,7 @@ class Effort:
 
 
 EFFORTS = {
-    "quick": Effort(
-        uniform=20_000, corners=1_000, beams=4, width=24, branch=64, rounds=40, verified=8, every=2**20
-    ),
+    "quick": Effort(uniform=20_000, corners=1_000, beams=4, width=24, branch=64, rounds=40, verified=8, every=2**20),
     "thorough": Effort(
         uniform=200_000, corners=4_000, beams=16, width=64, branch=128, rounds=200, verified=32, every=2**24
     ),

@@ -63,9 +63,7 @@ def _inputs(sealed: SealedModel) -> Iterator[Coefficient]:
         yield from _maps(entry)
         for what, value in (("low", entry.low), ("high", entry.high), ("typical", entry.typical)):
             if value is not None:
-                yield Coefficient(
-                    what, entry.name, "", delivered_unit(entry), form.decimal(value), form.bits(value)
-                )
+                yield Coefficient(what, entry.name, "", delivered_unit(entry), form.decimal(value), form.bits(value))
 
 
 def _maps(entry: Input) -> Iterator[Coefficient]:

@@ -59,9 +59,7 @@ def _shown(output: Output, part: str, sealed: SealedModel) -> str:
     return f"{number!r} ({form.bits(number)})"
 
 
-def _cause(
-    sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Output], wrong: Sequence[int]
-) -> str:
+def _cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Output], wrong: Sequence[int]) -> str:
     parts = {part for row in wrong for part in _parts(vectors[row].expected, outputs[row])}
     for row in wrong:
         if (vectors[row].expected.decision == score.FAULT) != (outputs[row].decision == score.FAULT):

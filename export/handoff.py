@@ -113,7 +113,10 @@ def _deliveries(sealed: SealedModel) -> Iterator[str]:
 @lru_cache(maxsize=1)
 def _template() -> Template:
     environment = Environment(
-        loader=PackageLoader("export", "."), undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True,
+        loader=PackageLoader("export", "."),
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
         keep_trailing_newline=True,
     )
     environment.filters["md"] = markdown_text

@@ -65,9 +65,7 @@ def log_of_quotient(numerator: Fraction, denominator: Fraction) -> Fraction:
     """ln(numerator / denominator) to 60 digits: the logarithms of the quotient's terms, subtracted."""
     quotient = numerator / denominator
     context = Context(prec=60, rounding=ROUND_HALF_EVEN)
-    difference = context.subtract(
-        context.ln(Decimal(quotient.numerator)), context.ln(Decimal(quotient.denominator))
-    )
+    difference = context.subtract(context.ln(Decimal(quotient.numerator)), context.ln(Decimal(quotient.denominator)))
     return Fraction(difference)
 
 

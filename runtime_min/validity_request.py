@@ -81,8 +81,10 @@ def request_problems(sealed: SealedModel) -> Iterator[Found]:
         for key in ("low", "high"):
             text = getattr(entry, key)
             if bool(entry.levels) != (text is None) or not is_exact(text):
-                yield f"{at}.{key}", f"found {shown(text)}", "expected " + (
-                    "null for an input with levels" if entry.levels else EXACT_TEXT
+                yield (
+                    f"{at}.{key}",
+                    f"found {shown(text)}",
+                    "expected " + ("null for an input with levels" if entry.levels else EXACT_TEXT),
                 )
         for key, found, todo in delivery_problems(entry):
             yield f"{at}.{key}", found, todo

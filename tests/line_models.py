@@ -16,7 +16,7 @@ from runtime_min.sealing import seal_request
 HOSTILE = (
     '"""\nimport os\nPLANTED = 1\n"""',
     "'''\nPLANTED = 1",
-    'ends in a backslash \\',
+    "ends in a backslash \\",
     '"; PLANTED = 1; "',
     "a\nPLANTED = 1",
     "a\rPLANTED = 1\x0b\x0c\x00\x1b[2J",

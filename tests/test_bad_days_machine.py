@@ -146,9 +146,7 @@ def test_link_to_a_release_is_followed_and_stays_a_link(plan: Path, tmp_path: Pa
         assert (link / MANIFEST).exists()
 
 
-def test_link_that_leads_in_a_circle_is_refused(
-    plan: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
-) -> None:
+def test_link_that_leads_in_a_circle_is_refused(plan: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     (tmp_path / "release").symlink_to("release")
     assert main(["ship", str(plan)]) == 2
     assert "is a link that leads in a circle; choose another --into" in capsys.readouterr().err
@@ -295,7 +293,11 @@ def on_terminal(command: list[str], **environment: str) -> tuple[int, str, str]:
     """Status, standard output (a pipe) and what a terminal of 80 columns on standard error received."""
     ours, theirs = pty.openpty()
     process = subprocess.Popen(
-        command, cwd=ROOT, stdout=subprocess.PIPE, stderr=theirs, text=True,
+        command,
+        cwd=ROOT,
+        stdout=subprocess.PIPE,
+        stderr=theirs,
+        text=True,
         env={**os.environ, "TERM": "xterm-256color", "COLUMNS": "80", **environment},
     )
     os.close(theirs)

@@ -141,8 +141,12 @@ def test_device_probability_lies_within_its_bound(name: str) -> None:
     bound = mpmath.mpf(budget.probability.numerator) / budget.probability.denominator
     rng = np.random.default_rng(3)
     for _ in range(12):
-        reals = [Fraction(int(rng.integers(entry.low, entry.high, endpoint=True))) if entry.counts or entry.levels else
-                 Fraction(rng.uniform(entry.low, entry.high)) for entry in sealed.inputs]
+        reals = [
+            Fraction(int(rng.integers(entry.low, entry.high, endpoint=True)))
+            if entry.counts or entry.levels
+            else Fraction(rng.uniform(entry.low, entry.high))
+            for entry in sealed.inputs
+        ]
         device = score.probability(sealed, [round_to(sealed.arithmetic, real) for real in reals])
         with mpmath.workdps(40):
             z = log_odds_of(trained, sealed, reals)[0]

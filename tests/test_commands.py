@@ -79,7 +79,11 @@ def test_score_gives_what_the_reference_module_gives(release: Path) -> None:
     ours = run("score", sealed, EXAMPLE / "runs.csv")
     other = subprocess.run(
         [sys.executable, "-m", "runtime_min", str(sealed), str(EXAMPLE / "runs.csv")],
-        cwd=ROOT, capture_output=True, text=True, check=True, timeout=60,
+        cwd=ROOT,
+        capture_output=True,
+        text=True,
+        check=True,
+        timeout=60,
     )
     assert ours.returncode == 0
     assert ours.stdout == other.stdout
@@ -161,7 +165,7 @@ def test_output_in_a_pipe_survives_a_locale_that_is_not_utf_8(tmp_path: Path) ->
 
 
 def test_path_with_spaces_and_quotes_ships(tmp_path: Path) -> None:
-    folder = tmp_path / "it's a \"folder\" "
+    folder = tmp_path / 'it\'s a "folder" '
     shutil.copytree(EXAMPLE, folder, ignore=shutil.ignore_patterns("release"))
     assert run("ship", folder / "plan.toml").returncode == 0
     assert (folder / "release" / "manifest.json").exists()

@@ -229,9 +229,7 @@ def test_no_call_lies_on_both_sides_of_the_threshold() -> None:
 # --- what cannot be sealed -------------------------------------------------------------------------------------------
 
 
-def sentences(
-    *quantities: Quantity, decision: DecisionRequest = NO_CALL, prevalence: str | None = None
-) -> list[str]:
+def sentences(*quantities: Quantity, decision: DecisionRequest = NO_CALL, prevalence: str | None = None) -> list[str]:
     plain = [replace(quantity, origin=None, counts=None) for quantity in quantities]
     trained = replace(make_trained(plain, 5), prevalence=prevalence)
     with pytest.raises(SealError) as caught:

@@ -380,9 +380,7 @@ AT_ZERO = DecisionRequest("1", "1", None)
 
 def sentences(quantities: list[Quantity], arithmetic: str, decision: DecisionRequest = AT_ZERO) -> list[str]:
     with pytest.raises(SealError) as caught:
-        seal_request(
-            make_trained(quantities, 5), make_request(quantities, arithmetic=arithmetic, decision=decision)
-        )
+        seal_request(make_trained(quantities, 5), make_request(quantities, arithmetic=arithmetic, decision=decision))
     return [str(problem) for problem in caught.value.problems]
 
 
@@ -407,9 +405,7 @@ def test_model_that_no_binary_point_carries_is_refused_with_what_is_to_blame() -
         f'input "flow": its weight over half its range comes to log-odds of 4e+8{end}'
         "narrow its range, or choose a stronger prior"
     )
-    assert refused(1.0, 1.0, -4e8) == (
-        f'input "impeller": a level of it weighs 4e+8{end}choose a stronger prior'
-    )
+    assert refused(1.0, 1.0, -4e8) == (f'input "impeller": a level of it weighs 4e+8{end}choose a stronger prior')
     found = sentences([IMPELLER], "int32", decision=DecisionRequest(None, None, "1e20"))
     assert found == [
         "decision: found a threshold of 1e+20, and 64 bits hold 1152921504606846976 with 3 binary places; "

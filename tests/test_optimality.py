@@ -212,7 +212,7 @@ def test_fit_that_left_out_what_the_plan_asks_is_found(asked: str, done: str, to
     [
         ("sd = 2.0", 'the prior of "current"'),
         ("sd = 1.0\nintercept_sd = 3.0", "the prior of the intercept"),
-        ('sd = 1.0\n[prior.term.flow]\nmean = 0.5', 'the prior of "flow"'),
+        ("sd = 1.0\n[prior.term.flow]\nmean = 0.5", 'the prior of "flow"'),
         ('sd = 1.0\n[prior.term.flow]\nsd = 1.0\nper = "unit"', 'the prior of "flow"'),
         ('sd = 1.0\n[prior.term."impeller=open"]\nsd = 0.5', 'the prior of "impeller=open"'),
         ("sd = 1.0\n[decision]\nprevalence = 0.02", "the plan states the prevalence 1/50, the trained model None"),

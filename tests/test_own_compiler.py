@@ -60,8 +60,11 @@ def test_size_of_what_the_compiler_makes_is_reported(command: str, header: Path)
     ("text", "ran", "found"),
     [
         ("exit 3", True, "it does not compile (status 3): no message"),
-        ("echo 'model.h:1: error: no such type' >&2; exit 1", True,
-         "it does not compile (status 1): model.h:1: error: no such type"),
+        (
+            "echo 'model.h:1: error: no such type' >&2; exit 1",
+            True,
+            "it does not compile (status 1): model.h:1: error: no such type",
+        ),
         ("kill -SEGV $$", True, "it does not compile (status -11): no message"),
         ("sleep 30", True, "the compiler did not finish (stopped after 1 s)"),
         ("exit 0", True, "the compiler says that it succeeded and wrote no object file; give it a command that does"),

@@ -36,8 +36,23 @@ def test_list_holds_forty_different_mistakes_over_every_stage() -> None:
     assert max(counts.values()) == 1
     assert len(counts) >= 40
     assert {planted.stage for planted in MISTAKES} >= {
-        "rows", "split", "standardise", "fit", "held-out results", "witness", "seal", "budget", "reference scorer",
-        "sealed model", "trained model", "vectors", "documents", "manifest", "C header", "Python module", "ONNX graph",
+        "rows",
+        "split",
+        "standardise",
+        "fit",
+        "held-out results",
+        "witness",
+        "seal",
+        "budget",
+        "reference scorer",
+        "sealed model",
+        "trained model",
+        "vectors",
+        "documents",
+        "manifest",
+        "C header",
+        "Python module",
+        "ONNX graph",
     }
 
 

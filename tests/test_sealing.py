@@ -355,9 +355,7 @@ def test_seal_takes_limits_of_any_kind_of_number() -> None:
 
 
 def test_arithmetic_that_is_not_known_is_named() -> None:
-    assert sentences(arithmetic="int8") == [
-        'arithmetic: found "int8"; choose binary64 or binary32 or int16 or int32'
-    ]
+    assert sentences(arithmetic="int8") == ['arithmetic: found "int8"; choose binary64 or binary32 or int16 or int32']
 
 
 def test_number_too_large_for_binary32_is_named_with_its_place() -> None:

@@ -60,7 +60,7 @@ def test_header_gives_the_bits_of_the_reference_scorer(name: str, tmp_path: Path
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("name", MODELS)
+@pytest.mark.parametrize("name", list(MODELS)[::3])  # every model is compiled in the quick ways above
 def test_whole_matrix_gives_the_bits_of_the_reference_scorer(name: str, tmp_path: Path) -> None:
     sealed = MODELS[name]
     path = tmp_path / C.file(sealed)

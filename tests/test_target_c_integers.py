@@ -54,7 +54,7 @@ def test_integer_header_gives_the_bits_of_the_reference_scorer(name: str, tmp_pa
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("name", MODELS)
+@pytest.mark.parametrize("name", list(MODELS)[::3])  # every model is compiled in the quick ways above
 def test_whole_matrix_gives_the_bits_in_integers(name: str, tmp_path: Path) -> None:
     sealed = MODELS[name]
     path = tmp_path / C.file(sealed)

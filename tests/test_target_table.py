@@ -147,8 +147,13 @@ def test_planted_mistake_is_caught_by_reading_back(mistake: str, points_at: str,
     elif mistake == "address":
         written(placed(sealed, 0x4000, "little"), tmp_path)
     elif mistake == "last digit":
-        header.write_text(re.sub(r"(\d)\), /\* weight_suction", lambda m: f"{(int(m[1]) + 1) % 10}), /* weight_suction",
-                                 header.read_text()))
+        header.write_text(
+            re.sub(
+                r"(\d)\), /\* weight_suction",
+                lambda m: f"{(int(m[1]) + 1) % 10}), /* weight_suction",
+                header.read_text(),
+            )
+        )
     else:
         header.write_text(re.sub(r"\{ 0x[0-9A-F]{2}", "{ 0x00", header.read_text()))
     troubles = [run.trouble or "" for run in read_back(sealed, tmp_path)]

@@ -96,8 +96,10 @@ C_MISTAKES = {
     "contraction on": (contracted, "self-test returned 3"),
     "the C library's expf": (library_exponential, "exponential|expf"),
     "a truncated file": (lambda text: text[: len(text) * 2 // 3], "error"),
-    "another model's id": (replaced(r'(PUMP_CAVITATION_MODEL_ID ")[0-9a-f]{16}', r"\g<1>0123456789abcdef"),
-                           "says model 0123456789abcdef"),
+    "another model's id": (
+        replaced(r'(PUMP_CAVITATION_MODEL_ID ")[0-9a-f]{16}', r"\g<1>0123456789abcdef"),
+        "says model 0123456789abcdef",
+    ),
 }
 
 
@@ -110,8 +112,10 @@ PYTHON_MISTAKES = {
     "a range bound": (replaced(r"(?<=\nHIGH_SUCTION = )250.0", "249.0"), 'input "suction" = 250.0 is held against'),
     "a level's weight": (replaced(r"(WEIGHTS_IMPELLER = \(\n.*\n    -?)", r"\g<1>1"), 'weight of "impeller" level 1'),
     "a truncated file": (lambda text: text[: len(text) * 2 // 3], "Error|error"),
-    "the library's exponential": (replaced("e = math.ldexp\\(p, k\\)", "e = math.exp(t)"),
-                                  "look at the exponential and the logistic function"),
+    "the library's exponential": (
+        replaced("e = math.ldexp\\(p, k\\)", "e = math.exp(t)"),
+        "look at the exponential and the logistic function",
+    ),
     "another model's id": (
         replaced('(?<=\nMODEL_ID = ")[0-9a-f]{16}', "0123456789abcdef"),
         "says model 0123456789abcdef",
@@ -227,12 +231,18 @@ def cut_graph(bench: Bench) -> list[str]:
 MISTAKES = (
     *(Planted("C header", name, in_text("c", ".h", edit), told) for name, (edit, told) in C_MISTAKES.items()),
     *(
-        Planted("C header, self-test off", name, in_text("c", ".h", C_MISTAKES[name][0], replaced(*SELF_TEST_OFF)),
-                "rows differ")
+        Planted(
+            "C header, self-test off",
+            name,
+            in_text("c", ".h", C_MISTAKES[name][0], replaced(*SELF_TEST_OFF)),
+            "rows differ",
+        )
         for name in BITS_OFF
     ),
-    *(Planted("Python module", name, in_text("python", ".py", edit), told)
-      for name, (edit, told) in PYTHON_MISTAKES.items()),
+    *(
+        Planted("Python module", name, in_text("python", ".py", edit), told)
+        for name, (edit, told) in PYTHON_MISTAKES.items()
+    ),
     *(Planted("ONNX graph", name, in_graph(edit), told) for name, (edit, told) in ONNX_MISTAKES.items()),
     Planted("ONNX graph", "a truncated file", cut_graph, "onnx.checker"),
 )

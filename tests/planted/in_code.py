@@ -140,8 +140,10 @@ def wide(inner: Around, model: Any, values: Any) -> Any:
     z = Fraction(model.intercepts[0])
     for term in model.terms:
         value = Fraction(values[term.of[0]])
-        z += Fraction(term.weights[0][int(value)]) if term.form == "level" else Fraction(term.weights[0][0]) * (
-            value - Fraction(term.datum or 0)
+        z += (
+            Fraction(term.weights[0][int(value)])
+            if term.form == "level"
+            else Fraction(term.weights[0][0]) * (value - Fraction(term.datum or 0))
         )
     return [float(np.float32(float(z)))]
 
@@ -150,9 +152,7 @@ def leaking_fold(bench: Bench) -> list[str]:
     """Rows are dealt to folds one by one, whatever their group; caught by a named test."""
     import test_split
 
-    bench.patch.setattr(
-        test_split, "folds", lambda rows, fitted, count, seed: np.arange(int(fitted.sum())) % count
-    )
+    bench.patch.setattr(test_split, "folds", lambda rows, fitted, count, seed: np.arange(int(fitted.sum())) % count)
     claim = test_split.test_folds_keep_groups_whole_and_know_no_position
     try:
         claim.hypothesis.inner_test([0, 0, 1, 1, 2, 2], 2, random.Random(1))  # one example; all would take a while
@@ -172,91 +172,182 @@ def swapped_columns(read: Any) -> Any:
 
 MISTAKES = (
     Planted("rows", "two columns change places", rows(swapped_columns), OPTIMUM),
-    Planted("rows", "a missing value is read as 0",
-            rows(lambda read: replace(read, values=np.nan_to_num(read.values, nan=0.0))), OPTIMUM + ".*flow"),
-    Planted("rows", "values are clamped to another limit",
-            rows(lambda read: replace(read, values=np.minimum(read.values, [2000.0, 45.0, 2.0]))), OPTIMUM + ".*flow"),
+    Planted(
+        "rows",
+        "a missing value is read as 0",
+        rows(lambda read: replace(read, values=np.nan_to_num(read.values, nan=0.0))),
+        OPTIMUM + ".*flow",
+    ),
+    Planted(
+        "rows",
+        "values are clamped to another limit",
+        rows(lambda read: replace(read, values=np.minimum(read.values, [2000.0, 45.0, 2.0]))),
+        OPTIMUM + ".*flow",
+    ),
     Planted("rows", "classes reversed", rows(lambda read: replace(read, labels=1 - read.labels)), OPTIMUM),
     Planted("rows", "weights ignored", rows(lambda read: replace(read, weights=None)), OPTIMUM),
     Planted("split", "held-out rows used in the fit", split(np.zeros_like), OPTIMUM + ".*to be fitted"),
     Planted("split", "the held-out rows are the fitted ones", split(lambda held: ~held), OPTIMUM),
     Planted("split", "a group on both sides", split(one_row_changes_sides), OPTIMUM),
-    Planted("split", "groups ignored",
-            rows(lambda read: replace(read, groups=None)), OPTIMUM),
+    Planted("split", "groups ignored", rows(lambda read: replace(read, groups=None)), OPTIMUM),
     Planted("split", "a fold that leaks a group", leaking_fold, "test_folds_keep_groups_whole"),
     Planted("standardise", "left out", standardised(raw), OPTIMUM + ".*population sd"),
     Planted("standardise", "applied twice", standardised(twice), OPTIMUM + ".*from the optimum"),
-    Planted("standardise", "of columns that were standardised already", standardised(of_standardised),
-            OPTIMUM + ".*population sd"),
+    Planted(
+        "standardise",
+        "of columns that were standardised already",
+        standardised(of_standardised),
+        OPTIMUM + ".*population sd",
+    ),
     Planted("standardise", "with the sample sd", standardised(sample_sd), OPTIMUM + ".*population sd"),
-    Planted("standardise", "row weights ignored",
-            standardised(lambda inner, values, weights, numeric: inner(values, None, numeric)), OPTIMUM),
-    Planted("standardise", "level indicators standardised too",
-            standardised(lambda inner, values, weights, numeric: inner(values, weights, [True] * len(numeric))),
-            "indicator|centre"),
-    Planted("fit", "typical value of the rows without their weights",
-            shipped("trainer.fit.typical_value", lambda inner, column, levels, weights: inner(column, levels, None)),
-            OPTIMUM + ".*typical"),
+    Planted(
+        "standardise",
+        "row weights ignored",
+        standardised(lambda inner, values, weights, numeric: inner(values, None, numeric)),
+        OPTIMUM,
+    ),
+    Planted(
+        "standardise",
+        "level indicators standardised too",
+        standardised(lambda inner, values, weights, numeric: inner(values, weights, [True] * len(numeric))),
+        "indicator|centre",
+    ),
+    Planted(
+        "fit",
+        "typical value of the rows without their weights",
+        shipped("trainer.fit.typical_value", lambda inner, column, levels, weights: inner(column, levels, None)),
+        OPTIMUM + ".*typical",
+    ),
     Planted("fit", "certificate of a perturbed optimum", solved(perturbed(1e-4)), OPTIMUM + ".*from the optimum"),
     Planted("fit", "stopped before the optimum", solved(perturbed(-0.02)), OPTIMUM + ".*from the optimum"),
-    Planted("fit", "row weights ignored",
-            solved(lambda inner, columns, labels, weights, prior: inner(columns, labels, None, prior)), OPTIMUM),
+    Planted(
+        "fit",
+        "row weights ignored",
+        solved(lambda inner, columns, labels, weights, prior: inner(columns, labels, None, prior)),
+        OPTIMUM,
+    ),
     Planted("fit", "prior left out", solved(prior(lambda p: replace(p, sds=(1e6,) * len(p.sds)))), OPTIMUM),
-    Planted("fit", "penalty 1/s² for 1/(2 s²)",
-            solved(prior(lambda p: replace(p, sds=tuple(sd / math.sqrt(2) for sd in p.sds)))), OPTIMUM),
+    Planted(
+        "fit",
+        "penalty 1/s² for 1/(2 s²)",
+        solved(prior(lambda p: replace(p, sds=tuple(sd / math.sqrt(2) for sd in p.sds)))),
+        OPTIMUM,
+    ),
     Planted("fit", "prior on the intercept", solved(prior(lambda p: replace(p, intercept_sd=1.0))), OPTIMUM),
-    Planted("fit", "class sums count rows, not weights",
-            shipped("trainer.fit.class_sums", lambda inner, labels, weights, classes: inner(labels, None, classes)),
-            OPTIMUM + ".*a class"),
-    Planted("fit", "posterior covariance is twice as large",
-            solved(lambda inner, *given: (lambda s: replace(
-                s, covariance=tuple(tuple(2 * c for c in row) for row in s.covariance)))(inner(*given))),
-            OPTIMUM + ".*covariance"),
-    Planted("held-out results", "of the other class",
-            shipped("trainer.fit.held_out_results", lambda inner, z, *rest: inner(-z, *rest)),
-            OPTIMUM + ".*held-out rows give log loss"),
-    Planted("held-out results", "row weights ignored",
-            shipped("trainer.fit.held_out_results", lambda inner, *given: inner(*given[:3], None)),
-            OPTIMUM + ".*held-out rows give log loss"),
-    Planted("held-out results", "ranking the wrong way round",
-            shipped("trainer.operate.area_under_roc", lambda inner, z, *rest: 1 - inner(z, *rest)),
-            OPTIMUM + ".*area under ROC"),
+    Planted(
+        "fit",
+        "class sums count rows, not weights",
+        shipped("trainer.fit.class_sums", lambda inner, labels, weights, classes: inner(labels, None, classes)),
+        OPTIMUM + ".*a class",
+    ),
+    Planted(
+        "fit",
+        "posterior covariance is twice as large",
+        solved(
+            lambda inner, *given: (
+                lambda s: replace(s, covariance=tuple(tuple(2 * c for c in row) for row in s.covariance))
+            )(inner(*given))
+        ),
+        OPTIMUM + ".*covariance",
+    ),
+    Planted(
+        "held-out results",
+        "of the other class",
+        shipped("trainer.fit.held_out_results", lambda inner, z, *rest: inner(-z, *rest)),
+        OPTIMUM + ".*held-out rows give log loss",
+    ),
+    Planted(
+        "held-out results",
+        "row weights ignored",
+        shipped("trainer.fit.held_out_results", lambda inner, *given: inner(*given[:3], None)),
+        OPTIMUM + ".*held-out rows give log loss",
+    ),
+    Planted(
+        "held-out results",
+        "ranking the wrong way round",
+        shipped("trainer.operate.area_under_roc", lambda inner, z, *rest: 1 - inner(z, *rest)),
+        OPTIMUM + ".*area under ROC",
+    ),
     Planted("witness", "log-odds of the other class", shipped("trainer.fit.witness_of", no_event_twice), WITNESS),
-    Planted("witness", "prevalence shift left out",
-            shipped("trainer.fit.shift_to_field", lambda inner, *given: 0.0), WITNESS),
-    Planted("witness", "prevalence shift twice",
-            shipped("trainer.fit.shift_to_field", lambda inner, *given: 2 * inner(*given)), WITNESS),
-    Planted("seal", "prevalence shift left out",
-            shipped("runtime_min.sealing_floats.prevalence_shift", lambda inner, trained: Fraction(0)),
-            WITNESS + "|off by|tolerance"),
-    Planted("seal", "prevalence shift twice",
-            shipped("runtime_min.sealing_floats.prevalence_shift", lambda inner, trained: 2 * inner(trained)),
-            WITNESS + "|tolerance"),
-    Planted("seal", "the fold forgets the centres",
-            folded(lambda score, trained: replace(score, intercept=Fraction(trained.intercept))),
-            WITNESS + "|tolerance"),
-    Planted("seal", "the fold forgets the scales",
-            folded(lambda score, trained: replace(score, weights=tuple(map(Fraction, trained.weights)))),
-            WITNESS + "|tolerance"),
-    Planted("seal", "levels in another order",
-            folded(lambda score, trained: replace(score, weights=(*score.weights[:2], *score.weights[:1:-1]))),
-            WITNESS + "|tolerance"),
-    Planted("seal", "thresholds negated",
-            shipped("runtime_min.sealing_floats.thresholds_of", lambda inner, d: tuple(-t for t in inner(d))[::-1]),
-            "a threshold is"),
-    Planted("seal", "no_call ignored",
-            shipped("runtime_min.sealing_floats.thresholds_of", lambda inner, d: (sum(inner(d)) / 2,) * 2),
-            "a threshold is"),
-    Planted("seal", "threshold from the inverse ratio of the costs",
-            shipped("runtime_min.folding.threshold_of", lambda inner, decision: -inner(decision)), "a threshold is"),
-    Planted("seal", "datum not absorbed by the intercept",
-            shipped("runtime_min.sealing_floats.unit_map",
-                    lambda inner, entry: (inner(entry)[0], inner(entry)[1] - 1000)), WITNESS + "|tolerance"),
+    Planted(
+        "witness",
+        "prevalence shift left out",
+        shipped("trainer.fit.shift_to_field", lambda inner, *given: 0.0),
+        WITNESS,
+    ),
+    Planted(
+        "witness",
+        "prevalence shift twice",
+        shipped("trainer.fit.shift_to_field", lambda inner, *given: 2 * inner(*given)),
+        WITNESS,
+    ),
+    Planted(
+        "seal",
+        "prevalence shift left out",
+        shipped("runtime_min.sealing_floats.prevalence_shift", lambda inner, trained: Fraction(0)),
+        WITNESS + "|off by|tolerance",
+    ),
+    Planted(
+        "seal",
+        "prevalence shift twice",
+        shipped("runtime_min.sealing_floats.prevalence_shift", lambda inner, trained: 2 * inner(trained)),
+        WITNESS + "|tolerance",
+    ),
+    Planted(
+        "seal",
+        "the fold forgets the centres",
+        folded(lambda score, trained: replace(score, intercept=Fraction(trained.intercept))),
+        WITNESS + "|tolerance",
+    ),
+    Planted(
+        "seal",
+        "the fold forgets the scales",
+        folded(lambda score, trained: replace(score, weights=tuple(map(Fraction, trained.weights)))),
+        WITNESS + "|tolerance",
+    ),
+    Planted(
+        "seal",
+        "levels in another order",
+        folded(lambda score, trained: replace(score, weights=(*score.weights[:2], *score.weights[:1:-1]))),
+        WITNESS + "|tolerance",
+    ),
+    Planted(
+        "seal",
+        "thresholds negated",
+        shipped("runtime_min.sealing_floats.thresholds_of", lambda inner, d: tuple(-t for t in inner(d))[::-1]),
+        "a threshold is",
+    ),
+    Planted(
+        "seal",
+        "no_call ignored",
+        shipped("runtime_min.sealing_floats.thresholds_of", lambda inner, d: (sum(inner(d)) / 2,) * 2),
+        "a threshold is",
+    ),
+    Planted(
+        "seal",
+        "threshold from the inverse ratio of the costs",
+        shipped("runtime_min.folding.threshold_of", lambda inner, decision: -inner(decision)),
+        "a threshold is",
+    ),
+    Planted(
+        "seal",
+        "datum not absorbed by the intercept",
+        shipped("runtime_min.sealing_floats.unit_map", lambda inner, entry: (inner(entry)[0], inner(entry)[1] - 1000)),
+        WITNESS + "|tolerance",
+    ),
     Planted("budget", "input rounding left out", without_item("rounded to"), "attack on the budget"),
     Planted("budget", "rounding of the sums left out", without_item("sum after"), "attack on the budget"),
     Planted("budget", "weight rounding left out", without_item("weight of"), "attack on the budget"),
-    Planted("reference scorer", "> for >= at the threshold", in_module_alone("runtime_min.score.outputs", strict),
-            MODULE + ".*threshold"),
-    Planted("reference scorer", "log-odds in one rounding", in_module_alone("runtime_min.score.scores", wide),
-            MODULE + ".*rows differ"),
+    Planted(
+        "reference scorer",
+        "> for >= at the threshold",
+        in_module_alone("runtime_min.score.outputs", strict),
+        MODULE + ".*threshold",
+    ),
+    Planted(
+        "reference scorer",
+        "log-odds in one rounding",
+        in_module_alone("runtime_min.score.scores", wide),
+        MODULE + ".*rows differ",
+    ),
 )

@@ -18,7 +18,7 @@ NUMBER = {"binary32": "float", "binary64": "double", "int16": "int32_t", "int32"
 WORD = {"binary32": "uint32_t", "binary64": "uint64_t", "int16": "uint32_t", "int32": "uint64_t"}
 
 
-def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:  # noqa: ARG001: the table has no code to test itself
+def emit(sealed: SealedModel, self_test: SelfTest) -> bytes:
     """The header, in ASCII. Raises ReleaseError where the model's name is none that C takes."""
     name = lexical.model_name(sealed)
     text = (HERE / "table.h.jinja").read_text(encoding="ascii")
