@@ -61,9 +61,13 @@ def _shown(output: Output, part: str, sealed: SealedModel) -> str:
 
 def _cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Output], wrong: Sequence[int]) -> str:
     parts = {part for row in wrong for part in _parts(vectors[row].expected, outputs[row])}
-    for row in wrong:
-        if (vectors[row].expected.decision == score.FAULT) != (outputs[row].decision == score.FAULT):
-            return _range_cause(sealed, vectors[row], outputs[row])
+    faulted = [
+        row
+        for row in wrong
+        if (vectors[row].expected.decision == score.FAULT) != (outputs[row].decision == score.FAULT)
+    ]
+    if faulted:
+        return _range_cause(sealed, [vectors[row] for row in faulted], outputs[faulted[0]])
     if parts == {"fault"}:
         return "the position of the faulty input is reported wrongly"
     if parts == {"decision"}:
@@ -77,18 +81,21 @@ def _cause(sealed: SealedModel, vectors: Sequence[Vector], outputs: Sequence[Out
     return _log_odds_cause(sealed, vectors, outputs)
 
 
-def _range_cause(sealed: SealedModel, vector: Vector, have: Output) -> str:
-    """The input that makes one side fault and not the other: the first whose value is a limit, beyond it, or NaN."""
+def _range_cause(sealed: SealedModel, faulted: Sequence[Vector], have: Output) -> str:
+    """The input that makes one side fault and not the other, in the first of these rows.
+
+    Where neither side says which, it is the one whose values lie closest together in all of them, as beside one limit.
+    """
+    vector = faulted[0]
     fault = vector.expected.fault or max(have.fault, 0)
     if fault:
         position = fault - 1
     else:
-        edge = [
-            at
-            for at, (value, entry) in enumerate(zip(vector.inputs, sealed.inputs, strict=True))
-            if not entry.low < value < entry.high
-        ]
-        position = edge[0] if edge else 0
+        spreads = []
+        for at, entry in enumerate(sealed.inputs):
+            values = [row.inputs[at] for row in faulted if math.isfinite(row.inputs[at])]
+            spreads.append((max(values) - min(values)) / (entry.high - entry.low) if values else 0.0)
+        position = spreads.index(min(spreads))
     entry, value = sealed.inputs[position], vector.inputs[position]
     return f'look at how input "{entry.name}" = {value!r} is held against {entry.low!r} to {entry.high!r}'
 

@@ -102,8 +102,16 @@ def become(order: dict[str, Any]) -> None:
         os._exit(status)
 
 
+def hear_signals() -> None:
+    """A process started in the background inherits ignored signals; here they must arrive."""
+    signal.signal(signal.SIGINT, signal.default_int_handler)
+    for number in (signal.SIGTERM, signal.SIGHUP):
+        signal.signal(number, signal.SIG_DFL)
+
+
 def serve() -> None:
     """Answer until the input ends."""
+    hear_signals()
     warm()
     for line in sys.stdin:
         order = json.loads(line)
