@@ -92,7 +92,7 @@ C_MISTAKES = {
     ),
     "a range bound": (
         table_entry("high", 0, lambda text: "249.0"),
-        r'input "suction" = (249|250)\.\d+ is held against',
+        r'input "suction" = (249\.\d+|250\.0) is held against -95\.0 to 250\.0',
     ),
     "a level's weight": (table_entry("weight", 7, lambda text: "1" + text), 'weight of "impeller" level 2'),
     "6-digit literals": (six_digits, "self-test returned 1"),
@@ -114,7 +114,7 @@ PYTHON_MISTAKES = {
     "> for >= at the threshold": (replaced("z >= THRESHOLD_HIGH", "z > THRESHOLD_HIGH"), "look at the comparison"),
     "a range bound": (
         replaced(r"(?<=\nHIGH_SUCTION = )250.0", "249.0"),
-        r'input "suction" = (249|250)\.\d+ is held against',
+        r'input "suction" = (249\.\d+|250\.0) is held against -95\.0 to 250\.0',
     ),
     "a level's weight": (replaced(r"(WEIGHTS_IMPELLER = \(\n.*\n    -?)", r"\g<1>1"), 'weight of "impeller" level 1'),
     "a truncated file": (lambda text: text[: len(text) * 2 // 3], "Error|error"),
@@ -187,7 +187,7 @@ ONNX_MISTAKES: dict[str, tuple[GraphEdit, str]] = {
     ),
     "a range bound": (
         lambda graph, sealed: onnx_constant(sealed.inputs[0].high, lambda high: high - 1)(graph),
-        r'input "suction" = (249|250)\.\d+ is held against',
+        r'input "suction" = (249\.\d+|250\.0) is held against -95\.0 to 250\.0',
     ),
     "a level's weight": (
         lambda graph, sealed: onnx_constant(sealed.terms[5].weights[0][2], lambda w: w + 0.25)(graph),
